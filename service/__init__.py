@@ -1,0 +1,1 @@
+"""The Nearhand service: lanes, envelope, store, learning, measuring, and the processes that run them."""

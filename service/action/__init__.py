@@ -1,0 +1,1 @@
+"""The action server: serves actions, never waits for anything else."""

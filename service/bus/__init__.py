@@ -1,0 +1,1 @@
+"""The wire: messages, their encoding, and the sockets that carry them."""

@@ -1,0 +1,1 @@
+"""Demonstrations: what an episode is, how good it is, and how episodes are divided."""

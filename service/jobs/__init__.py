@@ -1,0 +1,1 @@
+"""Jobs: work that runs in a process of its own, in a folder of its own."""

@@ -1,0 +1,1 @@
+"""The keeper: intake, desk, jobs, releases; the process that owns the store."""

@@ -1,0 +1,1 @@
+"""Learning: cloning and proximal-point imitation. The only package that imports torch."""

@@ -1,0 +1,1 @@
+"""Distances to the expert, with intervals; the gate."""

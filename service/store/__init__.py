@@ -1,0 +1,1 @@
+"""The one database: rigs, episodes, versions, jobs, measurements, releases, events."""

@@ -1,0 +1,1 @@
+"""Simulated rigs, experts and operators. NumPy and SciPy; Gymnasium optional."""
