@@ -103,7 +103,7 @@ class Braking(Frozen):
 
 
 class Novelty(Frozen):
-    """The confidence gate: ``trip_m`` low p-values of the last ``window_n`` trip, in at most ``epsilon`` of episodes."""
+    """Confidence gate: ``trip_m`` low p-values of the last ``window_n`` trip, in at most ``epsilon`` of episodes."""
 
     epsilon: Annotated[FiniteFloat, Field(gt=0, lt=1)] = 0.05
     trip_m: Annotated[int, Field(ge=1, le=100)] = 3
