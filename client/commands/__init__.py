@@ -1,0 +1,1 @@
+"""The command line's verbs, one module each, imported only when asked for."""

@@ -1,0 +1,116 @@
+"""The service as a whole: one data folder, one lock, four lanes, one supervisor."""
+
+from __future__ import annotations
+
+import fcntl
+import json
+import os
+import socket
+import sys
+import tempfile
+from collections.abc import Callable, Mapping
+from pathlib import Path
+from typing import IO
+
+from nearhand.service.bus.sockets import check_address
+from nearhand.service.clock import utc_now
+from nearhand.service.config import DEFAULT_HOST, DEFAULT_PORTS, ServiceSettings
+from nearhand.service.errors import ConfigError, StoreError
+from nearhand.service.process import StopSignal
+from nearhand.service.supervisor import Supervisor
+
+#: The kernel's limit for the path of a local socket is 107 bytes; the longest name below it takes 14.
+MAX_SOCKET_FOLDER = 90
+
+
+def log_line(text: str) -> None:
+    """Write one log line to standard error."""
+    print(f"{utc_now()} {text}", file=sys.stderr, flush=True)
+
+
+def free_ports(host: str, count: int) -> list[int]:
+    """Return ``count`` different TCP ports that nobody listens on at this moment."""
+    listeners = []
+    try:
+        for _ in range(count):
+            listener = socket.socket()
+            listeners.append(listener)
+            listener.bind((host, 0))
+        return [listener.getsockname()[1] for listener in listeners]
+    finally:
+        for listener in listeners:
+            listener.close()
+
+
+def make_settings(
+    data: Path, *, host: str = DEFAULT_HOST, ports: Mapping[str, int] | None = None, pick_ports: bool = False
+) -> ServiceSettings:
+    """Settle where the service keeps its data and listens.
+
+    Args:
+        data: the data folder; made if it does not exist.
+        host: a loopback host.
+        ports: port by lane; the defaults where a lane is left out.
+        pick_ports: take any free ports instead.
+
+    Raises:
+        ConfigError: the host is not loopback, or the folder cannot be made.
+    """
+    wanted = {**DEFAULT_PORTS, **(ports or {})}
+    check_address(f"tcp://{host}:1")
+    if pick_ports:
+        wanted = dict(zip(DEFAULT_PORTS, free_ports(host, len(DEFAULT_PORTS)), strict=True))
+    data = data.resolve()
+    run = data / "run"
+    try:
+        run.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        raise ConfigError(f"cannot make the data folder {data}: {error}; give another one with --data") from error
+    sockets = run
+    if len(os.fsencode(run)) > MAX_SOCKET_FOLDER:
+        sockets = Path(tempfile.mkdtemp(prefix="nearhand-"))
+    return ServiceSettings(
+        data=data,
+        control=f"ipc://{sockets / 'control.ipc'}",
+        progress=f"ipc://{sockets / 'progress.ipc'}",
+        **{lane: f"tcp://{host}:{port}" for lane, port in wanted.items()},
+    )
+
+
+def take_lock(settings: ServiceSettings) -> IO[str]:
+    """Lock the data folder for this process; the lock goes with the process, however it ends.
+
+    Raises:
+        StoreError: another service holds it.
+    """
+    stream = (settings.run / "lock").open("a+", encoding="utf-8")
+    try:
+        fcntl.flock(stream, fcntl.LOCK_EX | fcntl.LOCK_NB)
+    except OSError as error:
+        stream.close()
+        raise StoreError(
+            f"the data folder {settings.data} is in use by another service; stop that one or give another --data",
+            code="store.in_use",
+        ) from error
+    return stream
+
+
+def run_service(settings: ServiceSettings, *, on_ready: Callable[[ServiceSettings], None]) -> None:
+    """Run the service until SIGTERM or SIGINT.
+
+    Args:
+        settings: from :func:`make_settings`.
+        on_ready: called once all lanes are bound.
+
+    Raises:
+        StoreError: the folder is in use, or a process could not start.
+    """
+    with take_lock(settings):
+        settings_file = settings.run / "settings.json"
+        settings_file.write_text(json.dumps(settings.model_dump(mode="json"), indent=1), encoding="utf-8")
+        stop = StopSignal()
+        supervisor = Supervisor(settings_file, log=log_line)
+        supervisor.start()
+        on_ready(settings)
+        supervisor.run(stop)
+        log_line("stopped")
