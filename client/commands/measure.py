@@ -1,0 +1,39 @@
+"""Measure a version's distance to the expert, on held-out episodes and in closed loop, with 95 % intervals."""
+
+from __future__ import annotations
+
+import argparse
+
+from nearhand.client.jobs import JobBar, start_job, wait_job
+from nearhand.client.options import add_deed_options, add_desk_options, open_desk, print_json
+from nearhand.client.tables import distance_table, show
+from nearhand.service.bus.desk_messages import GetVersion, VersionReply
+
+
+def add_arguments(parser: argparse.ArgumentParser) -> None:
+    """Declare the options of ``measure``."""
+    add_desk_options(parser)
+    add_deed_options(parser)
+    parser.add_argument("version", type=int, help="the version's number")
+    parser.add_argument("--episodes", type=int, default=50, help="closed-loop episodes (default: %(default)s)")
+    parser.add_argument("--seed", type=int, default=1, help="seed of their start states (default: %(default)s)")
+    parser.add_argument("--operator", action="append", default=[], help="compare with this operator only")
+
+
+def run(options: argparse.Namespace) -> int:
+    """Run ``measure``."""
+    with open_desk(options) as desk, JobBar(f"measure {options.version}", quiet=options.json) as bar:
+        rig = desk.ask(GetVersion, VersionReply, version=options.version).rig
+        wishes = {
+            "version": options.version,
+            "closed_loop_episodes": options.episodes,
+            "seed": options.seed,
+            "operators": options.operator,
+        }
+        job = start_job(desk, "measure", rig, options.who, wishes, why=options.why)
+        result = wait_job(desk, job, show=bar.show).result or {}
+    if options.json:
+        print_json(result)
+    else:
+        show(distance_table(result, f"version {options.version}: distance to the expert"))
+    return 0

@@ -1,0 +1,73 @@
+"""What the command line shows as tables: distances, gate, inspection."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import TYPE_CHECKING, Any
+
+from nearhand.service.bus.desk_messages import ReleaseReply
+
+if TYPE_CHECKING:
+    from rich.console import RenderableType
+
+
+def show(*parts: RenderableType) -> None:
+    """Print tables and text to standard output."""
+    from rich.console import Console
+
+    console = Console()
+    for part in parts:
+        console.print(part)
+
+
+def number(value: float | None) -> str:
+    """Return a figure with three significant digits, or a dash."""
+    return "–" if value is None else f"{value:.3g}"
+
+
+def with_interval(figure: Mapping[str, Any] | None) -> str:
+    """Return ``value [low, high]``."""
+    if not figure:
+        return "–"
+    low, high = figure.get("low"), figure.get("high")
+    span = f" [{number(low)}, {number(high)}]" if low is not None and high is not None else ""
+    return f"{number(figure.get('value'))}{span}"
+
+
+def distance_table(measurement: Mapping[str, Any], title: str) -> RenderableType:
+    """Return the table of distances: version, expert's floor and clone side by side, with 95 % intervals."""
+    from rich.table import Table
+
+    table = Table(title=title, title_justify="left", caption="95 % intervals over episodes", caption_justify="left")
+    table.add_column("figure")
+    table.add_column("unit")
+    table.add_column("this version", justify="right")
+    table.add_column("expert's floor", justify="right")
+    table.add_column("clone", justify="right")
+    table.add_column("episodes", justify="right")
+    figures: Mapping[str, Mapping[str, Any]] = measurement.get("figures", {})
+    for name, figure in figures.items():
+        table.add_row(
+            name,
+            str(figure.get("unit", "")),
+            with_interval(figure),
+            with_interval(figure.get("floor")),
+            with_interval(figure.get("clone")),
+            str(figure.get("n", "")),
+        )
+    return table
+
+
+def gate_table(reply: ReleaseReply) -> RenderableType:
+    """Return the gate's verdict, bound by bound."""
+    from rich.console import Group
+    from rich.table import Table
+    from rich.text import Text
+
+    table = Table(title_justify="left")
+    table.add_column("bound met")
+    table.add_column("what was found")
+    for bound in reply.bounds:
+        table.add_row("yes" if bound.get("met") else "NO", str(bound.get("sentence", "")))
+    verdict = f"version {reply.version} is in service" if reply.released else f"version {reply.version} was refused"
+    return Group(Text(f"{verdict}. {reply.message}".strip()), table) if reply.bounds else Text(verdict)
