@@ -1,1 +1,1 @@
-"""The keeper: intake, desk, jobs, releases; the process that owns the store."""
+"""The keeper: the one process that owns the store; it takes demonstrations in, answers operators and runs jobs."""

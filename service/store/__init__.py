@@ -1,1 +1,1 @@
-"""The one database: rigs, episodes, versions, jobs, measurements, releases, events."""
+"""The one SQLite file: rigs, episodes, versions, jobs, measurements, releases and the event record."""

@@ -1,0 +1,235 @@
+"""What the keeper writes into a job's folder before it runs, and what it takes from there afterwards."""
+
+from __future__ import annotations
+
+import contextlib
+import hashlib
+import shutil
+from collections.abc import Sequence
+from pathlib import Path
+from typing import Any
+
+from nearhand.service.errors import ConflictError, NearhandError, PolicyFormatError, StoreError
+from nearhand.service.jobs.folder import JobFolder
+from nearhand.service.keeper.ledger import Ledger
+from nearhand.service.policy.format import read_policy
+from nearhand.service.rigs import Rig
+from nearhand.service.store.canonical import canonical
+from nearhand.service.store.episodes import EpisodeRow
+from nearhand.service.store.jobs import JobRow
+from nearhand.service.store.rigs import RigRow, machine_digest
+from nearhand.service.store.store import Store
+from nearhand.service.store.versions import VersionRow
+
+#: What each kind of job may see. A distillation is never given what it will be measured on.
+SPLITS: dict[str, tuple[str, ...]] = {
+    "distil": ("train", "calibration"),
+    "measure": ("train", "held-out"),
+    "inspect": (),
+}
+MAX_LOG_TAIL = 8192
+
+
+def write_job(store: Store, job: JobRow, folder: JobFolder, progress: str) -> None:
+    """Write everything that a job needs; ``job.json`` comes last and is what says that the folder is complete.
+
+    Raises:
+        ConflictError: there are no demonstrations to work on.
+        NearhandError: something named in the options is not there, or the store or the folder failed.
+    """
+    rig = store.rigs.get(job.rig)
+    if folder.has("job.json"):
+        content = folder.read_json("job.json")
+        content["progress"] = progress
+        folder.write_json("job.json", content)
+        return
+    rows = chosen_episodes(store, job)
+    options = dict(job.options)
+    try:
+        folder.write_episodes([store.episodes.load(row) for row in rows])
+        if job.kind == "measure":
+            options.update(_write_inputs(store, job, folder))
+        content = {
+            "job": job.job,
+            "kind": job.kind,
+            "rig": rig.rig.model_dump(mode="json"),
+            "options": options,
+            "progress": progress,
+            "given": _given(rows),
+        }
+        folder.write_json("job.json", content)
+    except OSError as error:
+        raise StoreError(f"cannot write the job's folder {folder.path}: {error}", code="store.folder") from error
+
+
+def chosen_episodes(store: Store, job: JobRow) -> list[EpisodeRow]:
+    """Return the episodes that a job may see; those with NaN or infinite values only where they are inspected.
+
+    Raises:
+        ConflictError: there are none of the kind that the job cannot do without.
+    """
+    operators = tuple(str(name) for name in job.options.get("operators") or ())
+    rows = store.episodes.closed(
+        job.rig, splits=SPLITS[job.kind], operators=operators, finite_only=job.kind != "inspect"
+    )
+    needed = {"distil": "train", "measure": "held-out"}.get(job.kind)
+    if not any(needed in (None, row.split) for row in rows):
+        by = f" by {', '.join(operators)}" if operators else ""
+        raise ConflictError(
+            f"rig {job.rig} has no closed, finite {needed or 'closed'} episodes{by}; collect demonstrations first",
+            code="conflict.no_demonstrations",
+        )
+    return rows
+
+
+def _given(rows: Sequence[EpisodeRow]) -> dict[str, Any]:
+    """Return which demonstrations a job was given, and a digest over them."""
+    listing = [[row.episode, row.operator, row.split, row.samples, row.rig_digest] for row in rows]
+    counts: dict[str, int] = {}
+    for row in rows:
+        counts[str(row.split)] = counts.get(str(row.split), 0) + 1
+    return {
+        "episodes": counts,
+        "samples": sum(row.samples for row in rows),
+        "operators": sorted({row.operator for row in rows}),
+        "sha256": hashlib.sha256(canonical(listing).encode()).hexdigest(),
+    }
+
+
+def _write_inputs(store: Store, job: JobRow, folder: JobFolder) -> dict[str, Any]:
+    version = store.versions.get(int(job.options["version"]))
+    siblings = store.versions.of_job(version.job) if version.job is not None else []
+    clones = [row.version for row in siblings if row.name == "clone" and row.version != version.version]
+    clone = clones[0] if clones else 0
+    in_service = store.versions.in_service(job.rig)
+    in_service = 0 if in_service == version.version else in_service
+    folder.write_bytes("input-version.policy", store.versions.policy(version.version))
+    if clone:
+        folder.write_bytes("input-clone.policy", store.versions.policy(clone))
+    if in_service:
+        folder.write_bytes("input-in-service.policy", store.versions.policy(in_service))
+    return {
+        "clone": clone,
+        "in_service": in_service,
+        "closed_loop_episodes": job.options.get("closed_loop_episodes", 50),
+        "seed": job.options.get("seed", 1),
+    }
+
+
+def take_result(ledger: Ledger, job: JobRow, folder: JobFolder) -> None:
+    """Store what a job left behind, in one transaction: done with its versions or measurement, or failed.
+
+    Raises:
+        NearhandError: the result or a policy file cannot be used; nothing was stored.
+    """
+    content = folder.read_json("result.json")
+    if content.get("state") != "done":
+        message, code = str(content.get("message", "no reason given"))[:2000], str(content.get("code", "job.failed"))
+        end_failed(ledger, job, code, message)
+        return
+    result = content.get("result") or {}
+    described = content.get("versions") or []
+    if not isinstance(result, dict) or not isinstance(described, list):
+        raise StoreError(f"job {job.job}: result.json does not hold a result map and a version list", code="job.result")
+    written = folder.read_json("job.json")
+    rig = ledger.store.rigs.get(job.rig)
+    used = Rig.model_validate(written["rig"])
+    with ledger.transaction():
+        drafted = _draft(ledger, job, folder, described, used.digest(), written.get("given", {}))
+        if job.kind == "measure":
+            version = int(job.options["version"])
+            ledger.store.versions.add_measurement(
+                version, result, rig_digest=used.digest(), machine_digest=machine_digest(used), job=job.job
+            )
+            ledger.record("measured", rig=job.rig, who="keeper", detail={"job": job.job, "version": version})
+        ledger.store.jobs.end(job.job, "done", result=result)
+        ledger.record(
+            "job-done", rig=rig.rig.name, who="keeper",
+            detail={"job": job.job, "kind": job.kind, "versions": [row.version for row in drafted]},
+        )  # fmt: skip
+    drop_working_files(folder)
+
+
+def _draft(
+    ledger: Ledger, job: JobRow, folder: JobFolder, described: Sequence[Any], rig_digest: str, given: dict[str, Any]
+) -> list[VersionRow]:
+    rig = ledger.store.rigs.get(job.rig)
+    rows: list[VersionRow] = []
+    for item in described:
+        if not isinstance(item, dict) or not isinstance(item.get("name"), str):
+            raise StoreError(f"job {job.job}: result.json describes a version without a name", code="job.result")
+        name = item["name"]
+        data = folder.read_bytes(f"output-{Path(name).name}.policy")
+        _check_policy(data, rig, f"job {job.job}, version {name!r}")
+        provenance = item.get("provenance")
+        provenance = dict(provenance) if isinstance(provenance, dict) else {}
+        provenance |= {"job": job.job, "options": job.options, "rig_digest": rig_digest, "demonstrations": given}
+        clones = [row.version for row in rows if row.name == "clone"]
+        row = ledger.store.versions.add(
+            rig=job.rig, rig_digest=rig_digest, name=name, method=str(item.get("method", name)), policy=data,
+            provenance=provenance, parent=clones[0] if clones else None, job=job.job,
+        )  # fmt: skip
+        rows.append(row)
+        ledger.record(
+            "drafted", rig=job.rig, who="keeper",
+            detail={"job": job.job, "version": row.version, "method": row.method, "sha256": row.sha256},
+        )  # fmt: skip
+    return rows
+
+
+def _check_policy(data: bytes, rig: RigRow, what: str) -> None:
+    file = read_policy(data)
+    expected = (
+        rig.rig.name,
+        tuple(channel.name for channel in rig.rig.observations),
+        tuple(channel.name for channel in rig.rig.actions),
+    )
+    if (file.rig, file.observations, file.actions) != expected:
+        raise PolicyFormatError(
+            f"{what}: the policy file is for rig {file.rig!r} with channels {file.observations} → {file.actions}, "
+            f"not for {expected[0]!r} with {expected[1]} → {expected[2]}",
+            code="policy.channels",
+        )
+
+
+def end_failed(ledger: Ledger, job: JobRow, code: str, message: str) -> None:
+    """Store that a job failed, and why."""
+    with ledger.transaction():
+        ledger.store.jobs.end(job.job, "failed", code=code, message=message, result={"code": code, "message": message})
+        ledger.record(
+            "job-failed", rig=job.rig, who="keeper",
+            detail={"job": job.job, "kind": job.kind, "code": code, "message": message},
+        )  # fmt: skip
+
+
+def take_or_fail(ledger: Ledger, job: JobRow, folder: JobFolder) -> None:
+    """Store what a job left behind; a result that cannot be used is the job's failure."""
+    try:
+        take_result(ledger, job, folder)
+    except (NearhandError, ValueError, KeyError, TypeError) as error:
+        code = error.code if isinstance(error, NearhandError) else "job.result"
+        end_failed(ledger, job, code, f"the job's result cannot be used: {error}"[:2000])
+
+
+def last_words(folder: JobFolder) -> str:
+    """Return the last line of a job's log, or nothing."""
+    try:
+        with (folder.path / "log.txt").open("rb") as stream:
+            stream.seek(max(0, stream.seek(0, 2) - MAX_LOG_TAIL))
+            lines = stream.read().decode(errors="replace").split("\n")
+    except OSError:
+        return ""
+    return next((line.strip()[:1000] for line in reversed(lines) if line.strip()), "")
+
+
+def drop_working_files(folder: JobFolder) -> None:
+    """Remove what only a running job needs: copies of demonstrations and policies, checkpoints."""
+    for pattern in ("episodes.safetensors", "input-*.policy", "checkpoint*"):
+        for path in folder.path.glob(pattern):
+            with contextlib.suppress(OSError):
+                path.unlink()
+
+
+def drop_folder(folder: JobFolder) -> None:
+    """Remove a cancelled job's folder."""
+    shutil.rmtree(folder.path, ignore_errors=True)

@@ -1,0 +1,86 @@
+"""A lane where each request gets one reply: envelopes kept as they came, every error answered."""
+
+from __future__ import annotations
+
+import contextlib
+import re
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import Any
+
+import zmq
+
+from nearhand.service.bus.codec import MAX_FRAME_BYTES, encode
+from nearhand.service.bus.message import ErrorReply, Message
+from nearhand.service.bus.sockets import bind, make_socket
+from nearhand.service.errors import NearhandError, WireError
+
+_IDENTIFIER = re.compile(r"[A-Za-z0-9][A-Za-z0-9._-]{0,63}")
+
+
+@dataclass(frozen=True, slots=True)
+class Request:
+    """One request; ``envelope`` goes in front of the reply, ``frames`` are what the client sent after it."""
+
+    envelope: tuple[bytes, ...]
+    frames: tuple[bytes, ...]
+
+    def frame(self) -> bytes:
+        """Return the message's frame.
+
+        Raises:
+            WireError: the request is not exactly one frame.
+        """
+        if len(self.frames) != 1:
+            raise WireError(f"a request is one frame; this one has {len(self.frames)}", code="wire.frames")
+        return self.frames[0]
+
+
+class Lane:
+    """A bound ROUTER socket; belongs to the thread that made it.
+
+    Args:
+        queue: most messages held per client and direction.
+
+    Raises:
+        ConfigError: the address is taken or not loopback.
+    """
+
+    def __init__(self, context: zmq.Context[zmq.Socket[bytes]], address: str, *, queue: int) -> None:
+        self.socket = make_socket(context, zmq.ROUTER, queue=queue, role="bind")
+        self.address = bind(self.socket, address)
+
+    def receive(self) -> Request | None:
+        """Return the next waiting request, or None."""
+        try:
+            parts = self.socket.recv_multipart(flags=zmq.NOBLOCK)
+        except zmq.Again:
+            return None
+        head = 2 if len(parts) > 2 and not parts[1] else 1
+        return Request(envelope=tuple(parts[:head]), frames=tuple(parts[head:]))
+
+    def reply(self, request: Request, message: Message) -> None:
+        """Send the reply; one that does not fit into a frame becomes an error that says so."""
+        data = encode(message)
+        if len(data) > MAX_FRAME_BYTES:
+            oversized = WireError(
+                f"the reply of {len(data)} bytes is over the limit of {MAX_FRAME_BYTES}; ask for less at once",
+                code="wire.oversized",
+            )
+            data = encode(error_reply(oversized, {"request": getattr(message, "request", None)}))
+        with contextlib.suppress(zmq.Again, zmq.ZMQError):
+            self.socket.send_multipart([*request.envelope, data], flags=zmq.NOBLOCK)
+
+    def close(self) -> None:
+        """Close the socket."""
+        self.socket.close(linger=0)
+
+
+def error_reply(error: NearhandError, table: Mapping[str, Any] | None) -> ErrorReply:
+    """Return the reply that stands for an error, with the echo of what could be read of the request."""
+    echoed: dict[str, Any] = {}
+    for name in ("request", "episode"):
+        value = (table or {}).get(name)
+        if isinstance(value, str) and _IDENTIFIER.fullmatch(value):
+            echoed[name] = value
+    return ErrorReply(code=error.code[:200], message=error.message[:2000], **echoed)

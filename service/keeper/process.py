@@ -1,0 +1,108 @@
+"""The keeper's process: one thread that waits for its lanes, the action server, its job and the stop signal."""
+
+from __future__ import annotations
+
+import argparse
+import os
+import time
+from collections.abc import Sequence
+from pathlib import Path
+
+import zmq
+
+from nearhand.service.clock import MonotonicClock
+from nearhand.service.config import ServiceSettings, read_settings
+from nearhand.service.errors import NearhandError, StoreError
+from nearhand.service.keeper.action_server import ActionServer
+from nearhand.service.keeper.desk import Desk
+from nearhand.service.keeper.intake import Intake
+from nearhand.service.keeper.job_queue import JobQueue
+from nearhand.service.keeper.lane import Lane
+from nearhand.service.keeper.ledger import Feed, Ledger, log_line
+from nearhand.service.keeper.office import Office
+from nearhand.service.process import StopSignal, announce_ready, die_with_parent
+from nearhand.service.store.store import Store
+
+#: Messages held per client and direction: a chunk can be several megabytes, a desk request hardly ever.
+INTAKE_QUEUE = 64
+DESK_QUEUE = 100
+
+
+class Keeper:
+    """Everything the process holds; ``close`` gives it all back.
+
+    Raises:
+        StoreError: the database cannot be used.
+        ConfigError: an address is taken.
+    """
+
+    def __init__(self, settings: ServiceSettings) -> None:
+        self._context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
+        self._poller = zmq.Poller()
+        self._store = Store(settings.database)
+        feed = Feed(self._context, settings.feed)
+        ledger = Ledger(self._store, feed)
+        self._intake_lane = Lane(self._context, settings.intake, queue=INTAKE_QUEUE)
+        self._desk_lane = Lane(self._context, settings.desk, queue=DESK_QUEUE)
+        self._server = ActionServer(ledger, self._context, settings.control)
+        self._queue = JobQueue(ledger, settings, self._context, self._poller)
+        lanes = {"intake": self._intake_lane.address, "desk": self._desk_lane.address, "feed": feed.address}
+        office = Office(ledger, self._server, self._queue, settings.model_copy(update=lanes), time.monotonic())
+        self._intake = Intake(ledger, self._intake_lane, MonotonicClock())
+        self._desk = Desk(office, self._desk_lane)
+        for socket in (self._intake_lane.socket, self._desk_lane.socket, self._server.socket, self._queue.socket):
+            self._poller.register(socket, zmq.POLLIN)
+
+    def run(self, stop: StopSignal) -> None:
+        """Serve until the stop signal."""
+        self._poller.register(stop.fileno(), zmq.POLLIN)
+        busy = False
+        while not stop.stopped:
+            pause_s = 0.0 if busy else min(self._server.pause_s(), self._queue.pause_s())
+            self._poller.poll(round(1000 * pause_s + 0.5))
+            busy = self.turn()
+
+    def turn(self) -> bool:
+        """Do what is due; return whether more may be waiting."""
+        try:
+            served = self._desk.serve() + self._intake.serve()
+            self._server.turn()
+            self._queue.turn()
+        except StoreError as error:
+            log_line(f"keeper-failed code={error.code} message={error.message!r}")
+            time.sleep(0.1)
+            return False
+        return served > 0
+
+    def close(self) -> None:
+        """End the running job's process and close the store and all sockets."""
+        self._queue.stop()
+        self._store.close()
+        self._context.destroy(linger=100)
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Run the keeper; exit status 0 after a stop signal, 1 if it could not start."""
+    parser = argparse.ArgumentParser(prog="nearhand-keeper")
+    parser.add_argument("--settings", type=Path, required=True)
+    parser.add_argument("--ready-fd", type=int, default=-1)
+    parser.add_argument("--parent", type=int, default=os.getppid())
+    options = parser.parse_args(arguments)
+    die_with_parent(options.parent)
+    stop = StopSignal()
+    try:
+        keeper = Keeper(read_settings(options.settings))
+    except NearhandError as error:
+        log_line(f"keeper-not-started code={error.code} message={error.message!r}")
+        return 1
+    try:
+        announce_ready(options.ready_fd)
+        keeper.run(stop)
+    finally:
+        keeper.close()
+    log_line("keeper-stopped")
+    return 0
+
+
+if __name__ == "__main__":
+    raise SystemExit(main())
