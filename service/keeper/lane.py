@@ -15,6 +15,8 @@ from nearhand.service.bus.message import ErrorReply, Message
 from nearhand.service.bus.sockets import bind, make_socket
 from nearhand.service.errors import NearhandError, WireError
 
+#: Most replies held for a client that sends and does not read; the next ones are lost to it.
+REPLY_QUEUE = 10_000
 _IDENTIFIER = re.compile(r"[A-Za-z0-9][A-Za-z0-9._-]{0,63}")
 
 
@@ -40,7 +42,7 @@ class Lane:
     """A bound ROUTER socket; belongs to the thread that made it.
 
     Args:
-        queue: most messages held per client and direction.
+        queue: most requests held per client; a client that sends more is held back.
 
     Raises:
         ConfigError: the address is taken or not loopback.
@@ -48,6 +50,8 @@ class Lane:
 
     def __init__(self, context: zmq.Context[zmq.Socket[bytes]], address: str, *, queue: int) -> None:
         self.socket = make_socket(context, zmq.ROUTER, queue=queue, role="bind")
+        # Replies to a whole batch go out at once; a router drops what is over its limit without a word.
+        self.socket.setsockopt(zmq.SNDHWM, REPLY_QUEUE)
         self.address = bind(self.socket, address)
 
     def receive(self) -> Request | None:

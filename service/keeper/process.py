@@ -23,7 +23,7 @@ from nearhand.service.keeper.office import Office
 from nearhand.service.process import StopSignal, announce_ready, die_with_parent
 from nearhand.service.store.store import Store
 
-#: Messages held per client and direction: a chunk can be several megabytes, a desk request hardly ever.
+#: Requests held per client: a chunk can be several megabytes, a desk request hardly ever.
 INTAKE_QUEUE = 64
 DESK_QUEUE = 100
 
