@@ -27,7 +27,7 @@ from nearhand.service.bus.intake_messages import INTAKE_REPLIES, Ack, OpenEpisod
 from nearhand.service.bus.message import ErrorReply
 from nearhand.service.bus.sockets import BULK_QUEUE, connect, make_socket
 from nearhand.service.clock import utc_now
-from nearhand.service.errors import ConfigError, LinkError, NearhandError, StoreError, WireError
+from nearhand.service.errors import ConfigError, LinkError, StoreError, WireError
 from nearhand.service.rigs import Rig, sentence
 
 #: How often samples are taken over from the control loop; what a killed process can lose.
@@ -68,7 +68,7 @@ class _Stream:
 
     @property
     def is_done(self) -> bool:
-        """Whether the service has settled it and the control loop adds no more; a rejected one is spooled to its end."""
+        """Whether the service has settled it and no more is added; a rejected one is spooled to its end."""
         if not self.upload.is_over or self.recording is None or self.recording.has_failed:
             return self.upload.is_over
         return self.upload.spool.ending is not None
