@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from nearhand.client.desk import Desk
 from nearhand.client.tryout.asking import Asking
-from nearhand.client.tryout.driving import start_drive
+from nearhand.client.tryout.driving import Drive
 from nearhand.client.tryout.judging import arm
 from nearhand.client.tryout.narrator import Narrator
 from nearhand.client.tryout.plan import WHO, Plan
@@ -39,6 +39,8 @@ from nearhand.service.rigs import Rig
 ACTION_SERVER = "nearhand.service.action.process"
 #: Observations beyond this many standard deviations overflow the deliberately damaged policy.
 OVERFLOW_SD = 50.0
+#: How long the rig is driven around the kill.
+KILL_DRIVE_S = 4.0
 
 
 def inject_all(desk: Desk, narrator: Narrator, plan: Plan, service: ServiceProcess) -> None:
@@ -240,18 +242,17 @@ def _load_and_arm(control: str, rig: Rig) -> None:
 def killed_server(desk: Desk, narrator: Narrator, plan: Plan, service: ServiceProcess) -> None:
     """The action server is killed while a rig is driven: the link holds the machine; the server comes back latched."""
     arm(desk, plan, why="tryout: before the kill")
-    drive = start_drive(plan, service.lanes["action"], episodes=1, paced=True)
-    try:
+    periods = round(KILL_DRIVE_S / plan.rig.timing.period_s)
+    with Drive(plan, service.lanes["action"], episodes=1, paced=True, seed=plan.drive_seed, steps=periods) as drive:
         drive.await_steps(25)
         killed = service.kill(ACTION_SERVER)
         killed_at_s = time.monotonic()
         service.await_restart(ACTION_SERVER, killed)
         narrator.say(f"the action server was killed and restarted within {time.monotonic() - killed_at_s:.2f} s")
-        result = drive.finish()
-    finally:
-        drive.stop()
-    narrator.check(result.fallback_steps > 0, f"the rig-side watchdog acted on {result.fallback_steps} control periods")
-    narrator.check(result.resumed_steps == 0, "the machine did not resume by itself")
+        total = drive.finish(10 * KILL_DRIVE_S)
+    armed, fallback = int(total["modes"].get("armed", 0)), int(total["fallback_steps"])
+    narrator.check(fallback > 0, f"the rig-side link held the machine with its own fallback for {fallback} periods")
+    narrator.check(armed + fallback <= int(total["steps"]), f"{armed} periods armed before the kill, none after it")
     narrator.check(await_mode(desk, plan.rig.name, "latched"), "the service came back latched")
     state = arm(desk, plan, why="tryout: after the restart")
     narrator.check(state.mode == "armed" and state.version > 0, f"re-armed with version {state.version}")
