@@ -31,6 +31,9 @@ DESK_QUEUE = 100
 class Keeper:
     """Everything the process holds; ``close`` gives it all back.
 
+    Attributes:
+        store: the records.
+
     Raises:
         StoreError: the database cannot be used.
         ConfigError: an address is taken.
@@ -39,9 +42,9 @@ class Keeper:
     def __init__(self, settings: ServiceSettings) -> None:
         self._context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
         self._poller = zmq.Poller()
-        self._store = Store(settings.database)
+        self.store = Store(settings.database)
         feed = Feed(self._context, settings.feed)
-        ledger = Ledger(self._store, feed)
+        ledger = Ledger(self.store, feed)
         self._intake_lane = Lane(self._context, settings.intake, queue=INTAKE_QUEUE)
         self._desk_lane = Lane(self._context, settings.desk, queue=DESK_QUEUE)
         self._server = ActionServer(ledger, self._context, settings.control)
@@ -77,7 +80,7 @@ class Keeper:
     def close(self) -> None:
         """End the running job's process and close the store and all sockets."""
         self._queue.stop()
-        self._store.close()
+        self.store.close()
         self._context.destroy(linger=100)
 
 

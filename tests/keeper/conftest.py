@@ -25,7 +25,7 @@ import zmq
 
 from nearhand.service.bus.codec import decode, encode
 from nearhand.service.bus.control_messages import CONTROL_REQUESTS, Arm, ControlReply, Drain, DrainReply, Latch, Load
-from nearhand.service.bus.desk_messages import DESK_REPLIES, PutRig, RigReply
+from nearhand.service.bus.desk_messages import DESK_REPLIES, EventsReply, ListEvents, PutRig, RigReply
 from nearhand.service.bus.intake_messages import INTAKE_REPLIES, Ack, Chunk, CloseEpisode, OpenEpisode
 from nearhand.service.bus.message import ErrorReply, Message
 from nearhand.service.config import ServiceSettings
@@ -267,6 +267,22 @@ class Client:
     def refused(self, request: type[Message], **fields: Any) -> str:
         """Return the code of the desk's error reply."""
         return self.ask(request, ErrorReply, **fields).code
+
+    def until(
+        self, holds: Callable[[Reply], bool], request: type[Message], expected: type[Reply], **fields: Any
+    ) -> Reply:
+        """Ask the desk until its reply is as wished, for at most a while."""
+        end_s = time.monotonic() + 30
+        while True:
+            reply = self.ask(request, expected, **fields)
+            if holds(reply):
+                return reply
+            assert time.monotonic() < end_s, reply
+
+    def events(self, *what: str) -> list[dict[str, Any]]:
+        """Return the events of some kinds, or all."""
+        rows = self.ask(ListEvents, EventsReply).events
+        return [row for row in rows if not what or row["what"] in what]
 
     def intake(self, message: Message) -> Message:
         """Return the intake's reply."""

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import zlib
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import pytest
@@ -95,7 +95,7 @@ def test_other_content_under_the_same_number_is_refused(crane: Client, samples: 
     ],
 )
 def test_a_wrong_chunk_is_refused_and_counted(
-    crane: Client, samples: Samples, changes: dict[str, object], expected: str
+    crane: Client, samples: Samples, changes: dict[str, Any], expected: str
 ) -> None:
     crane.ack(samples.open("e1"))
     assert code(crane.intake(samples.chunk("e1", 0, **changes))) == expected

@@ -5,12 +5,14 @@ from __future__ import annotations
 import sqlite3
 import zlib
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 from hypothesis.extra import numpy as hnp
+from numpy.typing import NDArray
 
 from nearhand.service.episodes.episode import split_of
 from nearhand.service.errors import StoreError, UnknownNameError
@@ -19,7 +21,7 @@ from nearhand.service.store.episodes import ChunkRow, EpisodeRow
 from nearhand.service.store.store import Store
 
 
-def chunk_of(times: np.ndarray, observations: np.ndarray, actions: np.ndarray) -> ChunkRow:  # type: ignore[type-arg]
+def chunk_of(times: NDArray[Any], observations: NDArray[Any], actions: NDArray[Any]) -> ChunkRow:
     t, o, a = times.astype("<f8").tobytes(), observations.astype("<f4").tobytes(), actions.astype("<f4").tobytes()
     return ChunkRow(len(times), t, o, a, zlib.crc32(t + o + a))
 
@@ -61,7 +63,8 @@ def test_a_round_trip_keeps_every_bit(
     assert episode.times_s.tobytes() == times.tobytes()
     assert episode.observations.tobytes() == observations.tobytes()
     assert episode.actions.tobytes() == actions.tobytes()
-    assert (episode.times_s.dtype, episode.observations.dtype) == (np.float64, np.float32)
+    assert episode.times_s.dtype == np.float64
+    assert episode.observations.dtype == episode.actions.dtype == np.float32
 
 
 def test_splits_follow_the_order_of_closing_per_operator(stocked: Store) -> None:
