@@ -9,6 +9,7 @@ from nearhand.service.bus.desk_messages import CancelJob, GetJob, JobReply, Jobs
 from nearhand.service.errors import ConfigError, ConflictError
 from nearhand.service.keeper.job_files import chosen_episodes
 from nearhand.service.keeper.office import Office, Room
+from nearhand.service.recipes import recipe_from_map
 from nearhand.service.store.jobs import JobRow
 
 #: The whole-number options of each kind of job, with the least value each may have.
@@ -50,16 +51,19 @@ def _check_options(kind: str, options: Mapping[str, Any]) -> None:
     for name, least in _NUMBERS[kind].items():
         value = options.get(name, least)
         if type(value) is not int or value < least:
-            raise ConfigError(f"{kind}: {name} = {value!r} must be a whole number of at least {least}")
+            raise ConfigError(
+                f"{kind}: {name} = {value!r} must be a whole number of at least {least}", code="config.options"
+            )
     if kind == "measure" and "version" not in options:
         raise ConfigError("measure: say which version to measure", code="config.options")
     operators = options.get("operators", ())
     if not isinstance(operators, tuple | list) or not all(isinstance(name, str) for name in operators):
         raise ConfigError(f"{kind}: operators = {operators!r} must be a list of names", code="config.options")
-    if not isinstance(options.get("recipe", {}), Mapping):
-        raise ConfigError(
-            f"{kind}: recipe must be a map, see the recipes that come with Nearhand", code="config.recipe"
-        )
+    if kind == "distil":
+        recipe = options.get("recipe", {})
+        if not isinstance(recipe, Mapping):
+            raise ConfigError("distil: recipe must be a map; see the recipes that come with it", code="config.recipe")
+        recipe_from_map(recipe)
 
 
 def get_job(office: Office, request: GetJob) -> JobReply:

@@ -271,13 +271,14 @@ class Client:
     def until(
         self, holds: Callable[[Reply], bool], request: type[Message], expected: type[Reply], **fields: Any
     ) -> Reply:
-        """Ask the desk until its reply is as wished, for at most a while."""
-        end_s = time.monotonic() + 30
+        """Ask the desk until its reply is as wished, for at most a while; in between, leave the processor to others."""
+        end_s = time.monotonic() + 90
         while True:
             reply = self.ask(request, expected, **fields)
             if holds(reply):
                 return reply
             assert time.monotonic() < end_s, reply
+            self.socket("desk").poll(20)
 
     def events(self, *what: str) -> list[dict[str, Any]]:
         """Return the events of some kinds, or all."""
