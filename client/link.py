@@ -1,0 +1,211 @@
+"""The rig's end of the action lane: one observation out, one action back, and a watchdog of its own.
+
+Nothing here ever raises for a silent, late or wrong service, and nothing waits longer than the caller allows.
+
+How both ends agree after a trip: when this end's lease runs out it latches and stays silent until the server's
+deadline has passed too, so that the server latches as well (or has been restarted, and is latched). It then asks
+again and follows the server's fallback; the policy acts again only after an operator has re-armed the server.
+"""
+
+from __future__ import annotations
+
+import secrets
+import time
+from dataclasses import dataclass
+
+import numpy as np
+import zmq
+from numpy.typing import NDArray
+
+from nearhand.service.bus.action_messages import ACTION_REPLIES, Act, Action, Hello, Mode, Reason, Welcome
+from nearhand.service.bus.arrays import pack, unpack
+from nearhand.service.bus.codec import decode, encode
+from nearhand.service.bus.message import ErrorReply, Message
+from nearhand.service.bus.sockets import ACTION_QUEUE, connect, make_socket
+from nearhand.service.clock import Clock, MonotonicClock
+from nearhand.service.envelope.chain import limit
+from nearhand.service.envelope.fallback import FallbackAction
+from nearhand.service.envelope.limits import Float32, Limits
+from nearhand.service.errors import WireError
+from nearhand.service.rigs import Rig
+
+HELLO_EVERY_S = 0.05
+
+
+@dataclass(frozen=True, slots=True)
+class Drive:
+    """What the rig must do for the next control period.
+
+    Attributes:
+        action: (m,) float32, finite, within limits and (but for a ``rest`` fallback) within slew.
+        mode: ``armed`` while the policy acts; ``latched`` or ``empty`` while a fallback does.
+        version: the version that acts, 0 for none.
+        reasons: see :class:`Reason`; LINK when the service gave nothing usable in time.
+        novelty: conformal p-value of the observation, 1 when none came.
+        fresh: the action answers this very observation.
+        round_trip_s: from sending to receiving; 0 when nothing came.
+    """
+
+    action: Float32
+    mode: Mode
+    version: int
+    reasons: int
+    novelty: float
+    fresh: bool
+    round_trip_s: float
+
+
+class RigLink:
+    """The link of one rig; belongs to the thread that made it; close it when done.
+
+    Args:
+        rig: the rig's description, for its limits, timing and fallback.
+        address: of the action lane.
+        clock: the rig's monotonic clock.
+        wait_s: how long ``exchange`` waits for the reply; one control period by default.
+    """
+
+    def __init__(self, rig: Rig, address: str, *, clock: Clock | None = None, wait_s: float | None = None) -> None:
+        self._rig = rig
+        self._clock = clock or MonotonicClock()
+        self._wait_s = rig.timing.period_s if wait_s is None else wait_s
+        self._limits = Limits.of(rig)
+        self._fallback = FallbackAction(
+            self._limits, kind=rig.fallback.kind, ramp_per_s=rig.fallback.ramp_per_s, hold_s=rig.fallback.hold_s
+        )
+        self._context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
+        self._socket = make_socket(self._context, zmq.DEALER, queue=ACTION_QUEUE, role="connect")
+        connect(self._socket, address)
+        self._session = secrets.token_hex(8)
+        self._welcome = False
+        self._replaced = False
+        self._hello_at_ns = 0
+        self._seq = 0
+        self._held = self._limits.rest.copy()
+        self._held_until_ns: int | None = None
+        self._version = 0
+        self._latched = False
+        self._silent_until_ns = 0
+        self._standing = Reason.NONE
+
+    def close(self) -> None:
+        """Close the socket; the server will notice the silence."""
+        self._socket.close(linger=0)
+        self._context.term()
+
+    def __enter__(self) -> RigLink:
+        return self
+
+    def __exit__(self, *exc: object) -> None:
+        self.close()
+
+    def exchange(self, observation: NDArray[np.floating]) -> Drive:
+        """Send an observation (n,) in the rig's units and return what to do for the next control period."""
+        seen = np.asarray(observation, dtype=np.float32)
+        usable = seen.shape == (len(self._rig.observations),) and bool(np.isfinite(seen).all())
+        if usable:
+            self._fallback.see(seen)
+        begin_ns = self._clock.now_ns()
+        reply = None
+        if begin_ns >= self._silent_until_ns and not self._replaced:
+            reply = self._ask(seen, begin_ns)
+        now_ns = self._clock.now_ns()
+        if reply is not None:
+            return self._follow(reply, (now_ns - begin_ns) * 1e-9, now_ns)
+        return self._alone(now_ns, seen=usable)
+
+    def _ask(self, observation: Float32, begin_ns: int) -> Action | None:
+        """Send the query and wait for just its reply; keep the session open on the way."""
+        give_up_s = time.monotonic() + self._wait_s
+        if not self._welcome and not self._say_hello(begin_ns, give_up_s):
+            return None
+        self._seq += 1
+        message = Act(
+            rig=self._rig.name, session=self._session, seq=self._seq, sent_ns=begin_ns, obs=pack(observation),
+            applied=pack(self._held),
+        )  # fmt: skip
+        if not self._send(message):
+            return None
+        while (answer := self._receive(give_up_s)) is not None:
+            if isinstance(answer, Action) and answer.seq == self._seq:
+                return answer
+            if isinstance(answer, ErrorReply) and answer.seq == self._seq:
+                self._welcome = not answer.code.startswith(("unknown.", "conflict."))
+                self._replaced = answer.code == "conflict.session"
+                return None
+        return None
+
+    def _say_hello(self, begin_ns: int, give_up_s: float) -> bool:
+        if begin_ns >= self._hello_at_ns:
+            self._hello_at_ns = begin_ns + round(HELLO_EVERY_S * 1e9)
+            self._send(
+                Hello(
+                    rig=self._rig.name,
+                    session=self._session,
+                    observations=tuple(channel.name for channel in self._rig.observations),
+                    actions=tuple(channel.name for channel in self._rig.actions),
+                    period_s=self._rig.timing.period_s,
+                )
+            )
+        while not self._welcome and (answer := self._receive(give_up_s)) is not None:
+            self._welcome = isinstance(answer, Welcome) and answer.session == self._session
+        return self._welcome
+
+    def _send(self, message: Message) -> bool:
+        try:
+            self._socket.send(encode(message), flags=zmq.NOBLOCK)
+        except zmq.ZMQError:
+            return False
+        return True
+
+    def _receive(self, give_up_s: float) -> Message | None:
+        """Return the next well-formed message, or None when the time is up."""
+        while True:
+            left_ms = (give_up_s - time.monotonic()) * 1e3
+            if not self._socket.poll(max(0, round(left_ms))):
+                return None
+            try:
+                return decode(self._socket.recv(flags=zmq.NOBLOCK), ACTION_REPLIES)
+            except (WireError, zmq.ZMQError):
+                continue
+
+    def _follow(self, reply: Action, round_trip_s: float, now_ns: int) -> Drive:
+        """Do what the server says, after looking at it once more."""
+        try:
+            told = unpack(reply.action, len(self._rig.actions), what="action")
+        except WireError:
+            return self._alone(now_ns, seen=True)
+        if not np.isfinite(told).all():
+            return self._alone(now_ns, seen=True)
+        flags = Reason(reply.reasons)
+        if reply.mode == "armed" or self._rig.fallback.kind != "rest":
+            limited = limit(self._limits, told, self._held, None)
+            action = limited.action
+            flags |= Reason.CLIPPED if limited.clipped and not np.allclose(action, told, atol=1e-5) else Reason.NONE
+            flags |= Reason.SLEWED if limited.slewed and not np.allclose(action, told, atol=1e-5) else Reason.NONE
+        else:
+            action = np.minimum(np.maximum(told, self._limits.low), self._limits.high)
+        self._latched = False
+        self._fallback.end()
+        self._held = action
+        self._version = reply.version
+        self._held_until_ns = now_ns + round(self._rig.timing.lease_s * 1e9)
+        self._standing = Reason(reply.reasons) if reply.mode != "armed" else Reason.NONE
+        return Drive(action, reply.mode, reply.version, int(flags), reply.novelty, True, round_trip_s)
+
+    def _alone(self, now_ns: int, *, seen: bool) -> Drive:
+        """Hold the last action for the rest of its lease, then fall back and latch."""
+        if not self._latched and self._held_until_ns is not None and now_ns < self._held_until_ns:
+            mode: Mode = "latched" if self._standing else "armed"
+            return Drive(self._held, mode, self._version, int(self._standing | Reason.LINK), 1.0, False, 0.0)
+        if not self._latched:
+            self._latched = True
+            self._welcome = False
+            self._session = secrets.token_hex(8)
+            if self._held_until_ns is not None:
+                silence_s = self._rig.timing.deadline_s + 2 * self._rig.timing.period_s
+                self._silent_until_ns = now_ns + round(silence_s * 1e9)
+            self._held_until_ns = None
+        self._held = self._fallback.act(self._held, now_ns, seen=seen)
+        reasons = Reason.LINK | Reason.LATCHED | self._standing
+        return Drive(self._held, "latched", 0, int(reasons), 1.0, False, 0.0)

@@ -1,0 +1,111 @@
+"""What the keeper may ask of the action server: load, arm, latch, drain."""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Mapping
+
+from pydantic import ValidationError
+
+from nearhand.service.action.driven_rig import DrivenRig
+from nearhand.service.action.records import Occurrences
+from nearhand.service.bus.action_messages import Reason
+from nearhand.service.bus.control_messages import Arm, ControlReply, Drain, DrainReply, Latch, Load
+from nearhand.service.bus.message import Message
+from nearhand.service.clock import Clock
+from nearhand.service.errors import ConfigError, UnknownNameError, WireError
+from nearhand.service.policy.format import PolicyFile, read_policy
+from nearhand.service.rigs import Rig, sentence
+
+MOST_PER_DRAIN = 500
+
+
+class Control:
+    """Carries out control messages on the rigs.
+
+    Args:
+        rigs: the driven rigs by name; filled by ``load``.
+        occurrences: where what happened is noted.
+        instance: identifier of this process' life.
+    """
+
+    def __init__(
+        self, rigs: dict[str, DrivenRig], occurrences: Occurrences, counters: Counter[str], clock: Clock, instance: str
+    ) -> None:
+        self._rigs = rigs
+        self._occurrences = occurrences
+        self._counters = counters
+        self._clock = clock
+        self._instance = instance
+
+    def do(self, message: Message) -> Message:
+        """Carry out one request and return its reply.
+
+        Raises:
+            NearhandError: it cannot be done; nothing has changed.
+        """
+        if isinstance(message, Drain):
+            return self._drain(message)
+        if isinstance(message, Load):
+            return self._load(message)
+        if isinstance(message, Arm):
+            driven = self._known(message.rig)
+            driven.governor.arm()
+            self._occurrences.note(message.rig, "armed", {"who": message.who, "why": message.why})
+            return self._state(driven, message.request)
+        if isinstance(message, Latch):
+            driven = self._known(message.rig)
+            driven.governor.latch(Reason.OPERATOR)
+            self._occurrences.note(message.rig, "latched", {"who": message.who, "why": message.why})
+            return self._state(driven, message.request)
+        raise WireError(f"{message.kind} is no control request", code="wire.kind")
+
+    def _known(self, rig: str) -> DrivenRig:
+        if rig not in self._rigs:
+            raise UnknownNameError(f"the action server has no rig {rig!r}", code="unknown.rig")
+        return self._rigs[rig]
+
+    def _load(self, message: Load) -> ControlReply:
+        try:
+            rig = Rig.model_validate(message.description)
+        except ValidationError as error:
+            raise ConfigError(f"rig {message.rig}: {sentence(error)}", code="config.rig") from error
+        file: PolicyFile | None = None
+        if message.version:
+            file = read_policy(message.policy, expected_sha256=message.sha256)
+        driven = self._rigs.get(message.rig)
+        if driven is None or driven.rig != rig:
+            fresh = DrivenRig(rig, self._clock)
+            fresh.governor.load(message.version, file)
+            fresh.governor.latch(Reason.RESTARTED)
+            driven = self._rigs[message.rig] = fresh
+        else:
+            driven.governor.load(message.version, file)
+        self._occurrences.note(message.rig, "loaded", {"version": message.version})
+        return self._state(driven, message.request)
+
+    @staticmethod
+    def _state(driven: DrivenRig, request: str) -> ControlReply:
+        governor = driven.governor
+        return ControlReply(
+            request=request, rig=driven.rig.name, mode=governor.mode, version=governor.version,
+            reasons=int(governor.reasons),
+        )  # fmt: skip
+
+    def _drain(self, message: Drain) -> DrainReply:
+        self.collect_trips()
+        counters: Mapping[str, int] = {**self._counters, "occurrences_lost": self._occurrences.lost}
+        return DrainReply(
+            request=message.request,
+            instance=self._instance,
+            occurrences=self._occurrences.after(message.after, MOST_PER_DRAIN),
+            rigs={name: driven.state() for name, driven in self._rigs.items()},
+            counters=dict(counters),
+        )
+
+    def collect_trips(self) -> None:
+        """Note the trips that governors have had since the last time."""
+        for name, driven in self._rigs.items():
+            trips = driven.governor.trips
+            while trips:
+                self._occurrences.note(name, "trip", {"reason": trips.popleft(), "version": driven.governor.version})

@@ -1,0 +1,110 @@
+"""One rig as the action server sees it: its governor, its session, and what is told of it."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+
+from nearhand.service.action.governor import Decision, Governor
+from nearhand.service.bus.action_messages import Act, Hello, Welcome
+from nearhand.service.bus.arrays import unpack
+from nearhand.service.clock import Clock
+from nearhand.service.errors import ConflictError, UnknownNameError, WireError
+from nearhand.service.rigs import Rig
+
+PERIOD_TOLERANCE = 1e-6
+
+
+class DrivenRig:
+    """A rig that may be driven.
+
+    Args:
+        rig: its description.
+        clock: the receiver's clock.
+    """
+
+    def __init__(self, rig: Rig, clock: Clock) -> None:
+        self.rig = rig
+        self.governor = Governor(rig)
+        self._clock = clock
+        self._session = ""
+        self._last_ns: int | None = None
+        self._counted_ns = clock.now_ns()
+        self._counted = 0
+        self._rate_hz = 0.0
+
+    def hello(self, message: Hello) -> Welcome:
+        """Begin a session.
+
+        Raises:
+            ConflictError: its channels or its period are not the rig's.
+        """
+        for what, told, known in (
+            ("observation", message.observations, self.rig.observations),
+            ("action", message.actions, self.rig.actions),
+        ):
+            names = tuple(channel.name for channel in known)
+            if told != names:
+                raise ConflictError(
+                    f"rig {self.rig.name}: the session's {what} channels {list(told)} are not {list(names)}, in order",
+                    code="conflict.channels",
+                )
+        period_s = self.rig.timing.period_s
+        if not abs(message.period_s - period_s) <= PERIOD_TOLERANCE:
+            raise ConflictError(
+                f"rig {self.rig.name}: the session's period is {message.period_s} s; the rig's is {period_s} s",
+                code="conflict.period",
+            )
+        self._session = message.session
+        self.governor.begin_session(message.session, self._clock.now_ns())
+        return Welcome(
+            rig=self.rig.name, session=message.session, mode=self.governor.mode, version=self.governor.version,
+            deadline_s=self.rig.timing.deadline_s, lease_s=self.rig.timing.lease_s,
+        )  # fmt: skip
+
+    def act(self, message: Act) -> Decision:
+        """Answer one query.
+
+        Raises:
+            ConflictError: the session is not the present one.
+            WireError: a vector has the wrong size; an observation of the wrong size also trips.
+        """
+        if message.session != self._session:
+            if not self._session:
+                raise UnknownNameError(f"session {message.session} is unknown here; say hello", code="unknown.session")
+            raise ConflictError(f"session {message.session} was replaced by a newer one", code="conflict.session")
+        now_ns = self._clock.now_ns()
+        self._last_ns = now_ns
+        size = len(self.rig.observations)
+        applied = None
+        if message.applied is not None:
+            applied = unpack(message.applied, len(self.rig.actions), what="applied")
+        try:
+            observation = unpack(message.obs, size, what="obs")
+        except WireError:
+            self.governor.act(np.full(size, np.nan, dtype=np.float32), message.seq, message.sent_ns, now_ns, applied)
+            raise
+        return self.governor.act(observation, message.seq, message.sent_ns, now_ns, applied)
+
+    def state(self) -> dict[str, Any]:
+        """Return what the keeper shows of the rig."""
+        now_ns = self._clock.now_ns()
+        queries = self.governor.counts["queries"]
+        if now_ns - self._counted_ns > 500_000_000:
+            self._rate_hz = (queries - self._counted) / ((now_ns - self._counted_ns) * 1e-9)
+            self._counted_ns, self._counted = now_ns, queries
+        return {
+            "mode": self.governor.mode,
+            "version": self.governor.version,
+            "reasons": int(self.governor.reasons),
+            "observation": [float(value) for value in self.governor.last_observation],
+            "action": [float(value) for value in self.governor.last_action],
+            "novelty": float(self.governor.novelty),
+            "epsilon": float(self.governor.epsilon),
+            "queries": queries,
+            "interventions": self.governor.counts["interventions"],
+            "trips": self.governor.counts["trips"],
+            "age_s": -1.0 if self._last_ns is None else (now_ns - self._last_ns) * 1e-9,
+            "rate_hz": self._rate_hz,
+        }

@@ -1,0 +1,276 @@
+"""One rig's policy, confidence gate, envelope and latch, as a state machine on values and times. No sockets here.
+
+The order per query: form, freshness, novelty, magnitude, slew, braking, latch. A trip latches: the fallback acts until
+an operator arms again. Arming permits; nothing moves until the rig asks.
+"""
+
+from __future__ import annotations
+
+from collections import Counter, deque
+from dataclasses import dataclass
+
+import numpy as np
+
+from nearhand.service.bus.action_messages import Mode, Reason
+from nearhand.service.envelope.chain import limit
+from nearhand.service.envelope.fallback import FallbackAction
+from nearhand.service.envelope.limits import Float32, Limits
+from nearhand.service.envelope.novelty import NoveltyScore
+from nearhand.service.envelope.watchdog import Watchdog
+from nearhand.service.errors import ConflictError, PolicyFormatError
+from nearhand.service.policy.format import PolicyFile
+from nearhand.service.rigs import Rig
+
+#: As far back as any policy can look.
+HISTORY = 17
+#: Reasons that say something of one query only; the others stand as long as the latch.
+PASSING = Reason.CLIPPED | Reason.SLEWED | Reason.BRAKED | Reason.OLD
+#: Float32 rounding of a limit is no intervention.
+VISIBLE = 1e-6
+
+
+@dataclass(frozen=True, slots=True)
+class Decision:
+    """The answer to one query: the action (m,) and everything that is said about it."""
+
+    action: Float32
+    mode: Mode
+    version: int
+    reasons: int
+    novelty: float
+
+
+class Governor:
+    """Decides one rig's actions.
+
+    Args:
+        rig: the rig.
+        gate_trips: whether low p-values latch; otherwise they are only reported.
+
+    Attributes:
+        mode: ``empty``, ``latched`` or ``armed``.
+        version: the version in service, 0 for none.
+        reasons: why it is not armed.
+        counts: queries, trips and interventions by name.
+        trips: names of trips not yet collected by the owner, oldest first.
+    """
+
+    def __init__(self, rig: Rig, *, gate_trips: bool = True) -> None:
+        self.rig = rig
+        self._gate_trips = gate_trips
+        self._limits = Limits.of(rig)
+        self._n, self._m = len(rig.observations), len(rig.actions)
+        self._watchdog = Watchdog(rig.timing.deadline_s)
+        self._fallback = FallbackAction(
+            self._limits, kind=rig.fallback.kind, ramp_per_s=rig.fallback.ramp_per_s, hold_s=rig.fallback.hold_s
+        )
+        self._file: PolicyFile | None = None
+        self._novelty: NoveltyScore | None = None
+        self._window: Float32 = np.zeros(0, dtype=np.float32)
+        self._observed = np.zeros((HISTORY, self._n), dtype=np.float32)
+        self._acted = np.zeros((HISTORY, self._m), dtype=np.float32)
+        self._fresh_history = True
+        self._low_values: deque[bool] = deque(maxlen=rig.novelty.window_n)
+        self._previous = self._limits.rest.copy()
+        self._last_seq = -1
+        self.mode: Mode = "empty"
+        self.version = 0
+        self.reasons = Reason.EMPTY
+        self.novelty = 1.0
+        self.counts: Counter[str] = Counter()
+        self.trips: deque[str] = deque(maxlen=100)
+
+    @property
+    def epsilon(self) -> float:
+        """The false-alarm rate that the gate works at: the rig's, or the finest that calibration allows."""
+        smallest = 1.0 if self._novelty is None else self._novelty.smallest_epsilon
+        return max(self.rig.novelty.epsilon, smallest)
+
+    @property
+    def last_action(self) -> Float32:
+        """The action in force, (m,)."""
+        return self._previous
+
+    @property
+    def last_observation(self) -> Float32:
+        """The last observation that was finite, (n,)."""
+        latest: Float32 = self._observed[0]
+        return latest
+
+    def due_ns(self) -> int | None:
+        """Return when ``tick`` has something to do, or None."""
+        return self._watchdog.due_ns() if self.mode == "armed" else None
+
+    def load(self, version: int, file: PolicyFile | None) -> None:
+        """Put a version in service, or none (0, None), between two queries; an armed rig stays armed.
+
+        Raises:
+            PolicyFormatError: the file is for another rig or other channels; nothing changes.
+        """
+        if file is None:
+            self._file, self._novelty, self.version = None, None, 0
+            self.mode, self.reasons = "empty", Reason.EMPTY
+            return
+        names = tuple(c.name for c in self.rig.observations), tuple(c.name for c in self.rig.actions)
+        if file.rig != self.rig.name or (file.observations, file.actions) != names:
+            raise PolicyFormatError(
+                f"version {version} is for rig {file.rig} with channels {file.observations} → {file.actions}; "
+                f"rig {self.rig.name} has {names[0]} → {names[1]}",
+                code="policy.rig",
+            )
+        novelty = None
+        if file.novelty:
+            try:
+                novelty = NoveltyScore(file.novelty)
+            except (KeyError, ValueError, IndexError) as error:
+                raise PolicyFormatError(f"version {version}: its confidence gate is incomplete: {error}") from error
+            if novelty.d != file.policy.input_size:
+                raise PolicyFormatError(
+                    f"version {version}: its confidence gate looks at {novelty.d} values, its policy at "
+                    f"{file.policy.input_size}"
+                )
+        self._file, self._novelty, self.version = file, novelty, version
+        self._window = np.empty(file.policy.input_size, dtype=np.float32)
+        self._low_values.clear()
+        if self.mode == "empty":
+            self.mode, self.reasons = "latched", Reason.LATCHED | Reason.OPERATOR
+
+    def arm(self) -> None:
+        """Clear the latch.
+
+        Raises:
+            ConflictError: no version is in service.
+        """
+        if self._file is None:
+            raise ConflictError(
+                f"rig {self.rig.name} has no version in service; release one first", code="conflict.empty"
+            )
+        self.mode, self.reasons = "armed", Reason.NONE
+        self._low_values.clear()
+        self._watchdog.pause()
+        self._fallback.end()
+
+    def latch(self, reason: Reason) -> None:
+        """Stop for a reason; the fallback acts from the next query on. An empty rig stays empty."""
+        if self.mode == "armed":
+            self.counts["trips"] += 1
+            self.trips.append(str(reason.name).lower())
+        if self.mode != "empty":
+            self.mode = "latched"
+        self.reasons |= Reason.LATCHED | reason
+
+    def begin_session(self, session: str, now_ns: int) -> None:
+        """Forget the last session's history, clock and numbers; the machine is taken to be at rest."""
+        self._last_seq = -1
+        self._fresh_history = True
+        self._low_values.clear()
+        if self.mode == "armed" and self._watchdog.is_overdue(now_ns):
+            self.latch(Reason.GAP)
+        self._watchdog.forget()
+        self._previous = self._limits.rest.copy()
+        self._fallback.end()
+
+    def tick(self, now_ns: int) -> None:
+        """Latch if nothing has arrived within the deadline."""
+        if self.mode == "armed" and self._watchdog.is_overdue(now_ns):
+            self.latch(Reason.GAP)
+            self._watchdog.pause()
+
+    def act(
+        self, observation: Float32, seq: int, sent_ns: int, now_ns: int, applied: Float32 | None = None
+    ) -> Decision:
+        """Decide on one query.
+
+        Args:
+            observation: (n,) float32, finite or not.
+            seq: must be larger than the last one's.
+            sent_ns, now_ns: the rig's clock at sending and ours at receiving.
+            applied: (m,) the action that the rig truly holds, if it is not the last one decided.
+        """
+        self.counts["queries"] += 1
+        if seq <= self._last_seq:
+            self.counts["old"] += 1
+            return Decision(self._previous, self.mode, self.version, int(self.reasons | Reason.OLD), self.novelty)
+        self._last_seq = seq
+        self.tick(now_ns)
+        if self._watchdog.received(sent_ns, now_ns) and self.mode == "armed":
+            self.latch(Reason.LATE)
+        if applied is not None and self._is_inside(applied):
+            self._previous = applied.astype(np.float32)
+        seen = observation.shape == (self._n,) and bool(np.isfinite(observation).all())
+        if seen:
+            self._remember(observation)
+        elif self.mode == "armed":
+            self.latch(Reason.FORM)
+        flags = Reason.NONE
+        proposed = self._propose() if seen and self._file is not None else None
+        if proposed is not None and self.mode == "armed":
+            limited = limit(self._limits, proposed, self._previous, observation)
+            flags = self._flags(limited.clipped, limited.slewed, limited.braked)
+            action = limited.action
+        else:
+            action = self._fallback.act(self._previous, now_ns, seen=seen)
+            self.counts["fallback"] += 1
+        self._previous = action
+        return Decision(action, self.mode, self.version, int(self.reasons | flags), self.novelty)
+
+    def _is_inside(self, applied: Float32) -> bool:
+        return (
+            applied.shape == (self._m,)
+            and bool(np.isfinite(applied).all())
+            and bool((applied >= self._limits.low - VISIBLE).all() and (applied <= self._limits.high + VISIBLE).all())
+        )
+
+    def _remember(self, observation: Float32) -> None:
+        """Shift the history by one: row 0 is the present observation, and the action that led to it."""
+        if self._fresh_history:
+            self._observed[:] = observation
+            self._acted[:] = self._previous
+            self._fresh_history = False
+        else:
+            self._observed[1:] = self._observed[:-1]
+            self._observed[0] = observation
+            self._acted[1:] = self._acted[:-1]
+            self._acted[0] = self._previous
+        self._fallback.see(observation)
+
+    def _propose(self) -> Float32 | None:
+        """Return the policy's action (m,) if it is finite; look at the novelty on the way."""
+        assert self._file is not None
+        policy = self._file.policy
+        split = self._n * (1 + policy.past_observations)
+        rows = self._observed[: 1 + policy.past_observations]
+        np.divide(
+            rows - policy.observation_mean, policy.observation_scale, out=self._window[:split].reshape(rows.shape)
+        )
+        if policy.past_actions:
+            done = self._acted[: policy.past_actions]
+            self._window[split:] = ((done - policy.action_middle) / policy.action_half).reshape(-1)
+        self._judge_novelty()
+        with np.errstate(over="ignore", invalid="ignore"):
+            action = policy.action(self._window)
+        if np.isfinite(action).all():
+            return action
+        if self.mode == "armed":
+            self.latch(Reason.OUTPUT)
+        return None
+
+    def _judge_novelty(self) -> None:
+        if self._novelty is None or self._novelty.smallest_epsilon >= 1.0:
+            self.novelty = 1.0
+            return
+        self.novelty = self._novelty.p_value(self._window)
+        self._low_values.append(self.novelty <= self.epsilon)
+        if sum(self._low_values) >= self.rig.novelty.trip_m:
+            self.counts["novel"] += 1
+            if self._gate_trips and self.mode == "armed":
+                self.latch(Reason.NOVEL)
+
+    def _flags(self, clipped: bool, slewed: bool, braked: bool) -> Reason:
+        flags = Reason.NONE
+        for changed, reason in ((clipped, Reason.CLIPPED), (slewed, Reason.SLEWED), (braked, Reason.BRAKED)):
+            if changed:
+                flags |= reason
+                self.counts[str(reason.name).lower()] += 1
+        self.counts["interventions"] += bool(flags)
+        return flags

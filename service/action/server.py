@@ -1,0 +1,147 @@
+"""The action server's loop: every request gets one reply, queries go first, the watchdogs are kept.
+
+Blocking sockets in one thread; nothing here waits for the keeper, a trainer or a disk.
+"""
+
+from __future__ import annotations
+
+import contextlib
+from collections import Counter
+from typing import Any
+
+import zmq
+
+from nearhand.service.action.control import Control
+from nearhand.service.action.driven_rig import DrivenRig
+from nearhand.service.action.records import Occurrences
+from nearhand.service.bus.action_messages import ACTION_REQUESTS, Act, Action, Hello
+from nearhand.service.bus.arrays import pack
+from nearhand.service.bus.codec import decode_map, encode, from_map
+from nearhand.service.bus.control_messages import CONTROL_REQUESTS
+from nearhand.service.bus.message import ErrorReply, Message
+from nearhand.service.bus.sockets import ACTION_QUEUE, BULK_QUEUE, bind, make_socket
+from nearhand.service.clock import Clock
+from nearhand.service.errors import NearhandError, UnknownNameError
+from nearhand.service.process import StopSignal
+
+#: Queries taken in a row before the control socket and the watchdogs get their turn.
+BURST = 64
+IDLE_MS = 1_000
+
+Socket = zmq.Socket[bytes]
+
+
+class ActionServer:
+    """Owns the action and control sockets; belongs to the thread that made it.
+
+    Args:
+        context: the process' context.
+        action, control: addresses to bind.
+        clock: the receiver's clock.
+        instance: identifier of this process' life.
+
+    Raises:
+        ConfigError: an address cannot be bound.
+    """
+
+    def __init__(self, context: zmq.Context[Socket], action: str, control: str, clock: Clock, instance: str) -> None:
+        self._clock = clock
+        self._rigs: dict[str, DrivenRig] = {}
+        self._occurrences = Occurrences()
+        self.counters: Counter[str] = Counter()
+        self._control_room = Control(self._rigs, self._occurrences, self.counters, clock, instance)
+        self._action = make_socket(context, zmq.ROUTER, queue=ACTION_QUEUE, role="bind")
+        self.address = bind(self._action, action)
+        self._control = make_socket(context, zmq.ROUTER, queue=BULK_QUEUE, role="bind")
+        bind(self._control, control)
+
+    def close(self) -> None:
+        """Close both sockets."""
+        self._action.close(linger=0)
+        self._control.close(linger=0)
+
+    def run(self, stop: StopSignal) -> None:
+        """Serve until the stop signal."""
+        poller = zmq.Poller()
+        poller.register(self._action, zmq.POLLIN)
+        poller.register(self._control, zmq.POLLIN)
+        poller.register(stop.fileno(), zmq.POLLIN)
+        while not stop.stopped:
+            ready = dict(poller.poll(self._patience_ms()))
+            if self._action in ready:
+                self._serve(self._action, self._answer, BURST)
+            if self._control in ready:
+                self._serve(self._control, self._carry_out, 1)
+            now_ns = self._clock.now_ns()
+            for driven in self._rigs.values():
+                driven.governor.tick(now_ns)
+
+    def _patience_ms(self) -> int:
+        """Return how long to sleep: until the next watchdog may have to act."""
+        dues = [due for driven in self._rigs.values() if (due := driven.governor.due_ns()) is not None]
+        if not dues:
+            return IDLE_MS
+        return min(max((min(dues) - self._clock.now_ns()) // 1_000_000, 0) + 1, IDLE_MS)
+
+    @staticmethod
+    def _serve(socket: Socket, answer: Any, most: int) -> None:
+        for _ in range(most):
+            try:
+                parts = socket.recv_multipart(flags=zmq.NOBLOCK)
+            except zmq.Again:
+                return
+            head = 2 if len(parts) > 2 and not parts[1] else 1
+            reply = answer(parts[head] if len(parts) == head + 1 else b"")
+            # A peer that does not read its replies must not hold up the others.
+            with contextlib.suppress(zmq.ZMQError):
+                socket.send_multipart([*parts[:head], encode(reply)], flags=zmq.NOBLOCK)
+
+    def _answer(self, frame: bytes) -> Message:
+        table: dict[str, Any] = {}
+        try:
+            table = decode_map(frame)
+            message = from_map(table, ACTION_REQUESTS)
+            if isinstance(message, Act):
+                return self._act(message)
+            assert isinstance(message, Hello)
+            welcome = self._driven(message.rig).hello(message)
+            self._occurrences.note(message.rig, "session", {"session": message.session})
+            return welcome
+        except NearhandError as error:
+            self.counters["action_errors"] += 1
+            seq = table.get("seq")
+            known = isinstance(seq, int) and not isinstance(seq, bool) and 0 <= seq < 2**63
+            return ErrorReply(code=error.code, message=error.message[:2000], seq=seq if known else None)
+        except Exception as error:
+            self.counters["action_defects"] += 1
+            return ErrorReply(code="error.internal", message=f"an internal error: {type(error).__name__}")
+
+    def _act(self, message: Act) -> Action:
+        driven = self._driven(message.rig)
+        decision = driven.act(message)
+        return Action.model_construct(
+            v=1, kind="action", seq=message.seq, sent_ns=message.sent_ns, action=pack(decision.action),
+            mode=decision.mode, version=decision.version, lease_s=driven.rig.timing.lease_s,
+            reasons=decision.reasons, novelty=float(decision.novelty),
+        )  # fmt: skip
+
+    def _driven(self, rig: str) -> DrivenRig:
+        if rig not in self._rigs:
+            raise UnknownNameError(
+                f"the service knows no rig {rig!r}; register it at the desk first", code="unknown.rig"
+            )
+        return self._rigs[rig]
+
+    def _carry_out(self, frame: bytes) -> Message:
+        table: dict[str, Any] = {}
+        try:
+            table = decode_map(frame)
+            reply = self._control_room.do(from_map(table, CONTROL_REQUESTS))
+            self._control_room.collect_trips()
+            return reply
+        except NearhandError as error:
+            self.counters["control_errors"] += 1
+            request = table.get("request")
+            return ErrorReply(
+                code=error.code, message=error.message[:2000], request=request if isinstance(request, str) else None
+            )
