@@ -158,7 +158,7 @@ def _draft(
     for item in described:
         if not isinstance(item, dict) or not isinstance(item.get("name"), str):
             raise StoreError(f"job {job.job}: result.json describes a version without a name", code="job.result")
-        name = item["name"]
+        name = item["name"][:64]
         data = folder.read_bytes(f"output-{Path(name).name}.policy")
         _check_policy(data, rig, f"job {job.job}, version {name!r}")
         provenance = item.get("provenance")
@@ -166,7 +166,7 @@ def _draft(
         provenance |= {"job": job.job, "options": job.options, "rig_digest": rig_digest, "demonstrations": given}
         clones = [row.version for row in rows if row.name == "clone"]
         row = ledger.store.versions.add(
-            rig=job.rig, rig_digest=rig_digest, name=name, method=str(item.get("method", name)), policy=data,
+            rig=job.rig, rig_digest=rig_digest, name=name, method=str(item.get("method", name))[:200], policy=data,
             provenance=provenance, parent=clones[0] if clones else None, job=job.job,
         )  # fmt: skip
         rows.append(row)

@@ -64,14 +64,18 @@ class Lane:
         return Request(envelope=tuple(parts[:head]), frames=tuple(parts[head:]))
 
     def reply(self, request: Request, message: Message) -> None:
-        """Send the reply; one that does not fit into a frame becomes an error that says so."""
-        data = encode(message)
+        """Send the reply; one that cannot be sent as a frame becomes an error that says so."""
+        echo = {name: getattr(message, name, None) for name in ("request", "episode")}
+        try:
+            data = encode(message)
+        except (TypeError, ValueError, OverflowError) as error:
+            data = encode(error_reply(WireError(f"the reply cannot be written: {error}", code="wire.reply"), echo))
         if len(data) > MAX_FRAME_BYTES:
             oversized = WireError(
                 f"the reply of {len(data)} bytes is over the limit of {MAX_FRAME_BYTES}; ask for less at once",
                 code="wire.oversized",
             )
-            data = encode(error_reply(oversized, {"request": getattr(message, "request", None)}))
+            data = encode(error_reply(oversized, echo))
         with contextlib.suppress(zmq.Again, zmq.ZMQError):
             self.socket.send_multipart([*request.envelope, data], flags=zmq.NOBLOCK)
 

@@ -11,9 +11,14 @@ from nearhand.service.errors import ConfigError
 
 
 def plain(value: Any) -> Any:
-    """Return a value as JSON can hold it: bytes as hexadecimal, NaN and infinities as text, keys as text."""
-    if value is None or isinstance(value, bool | int | str):
+    """Return a value as JSON and the wire can hold it.
+
+    Keys become text, bytes hexadecimal; NaN, infinities and whole numbers of more than 64 bits become text.
+    """
+    if value is None or isinstance(value, bool | str):
         return value
+    if isinstance(value, int):
+        return value if -(2**63) <= value < 2**64 else str(value)
     if isinstance(value, float):
         return value if math.isfinite(value) else repr(value)
     if isinstance(value, bytes):

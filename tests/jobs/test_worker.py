@@ -58,7 +58,7 @@ def folder(tmp_path: Path, generator: np.random.Generator) -> JobFolder:
                 episode=f"e{index}",
                 rig="yard-crane",
                 operator="ann",
-                times_s=np.arange(60) * 0.05,
+                times_s=np.arange(60, dtype=np.float64) * np.float64(0.05),
                 observations=generator.standard_normal((61, 2)).astype(np.float32),
                 actions=generator.uniform(-0.6, 0.6, (60, 1)).astype(np.float32),
             )

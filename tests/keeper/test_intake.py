@@ -191,3 +191,13 @@ def test_the_checksum_covers_all_three_columns(crane: Client, samples: Samples) 
         assert code(crane.intake(good.model_copy(update={column: bytes(damaged)}))) == "wire.crc"
     assert good.crc == zlib.crc32(good.times + good.obs + good.act)
     assert crane.ack(good).durable == 1
+
+
+def test_an_episode_too_large_for_one_frame_is_stored_and_says_so(crane: Client, samples: Samples) -> None:
+    # 110 chunks of 4,096 samples at 20 bytes each are 9 MB; a frame holds 8 MiB.
+    crane.ack(samples.open("e1"))
+    for number in range(110):
+        assert crane.ack(samples.chunk("e1", number, count=4096)).durable == number + 1
+    assert crane.ack(samples.close("e1", 110, count=4096)).samples == 110 * 4096
+    assert crane.refused(GetEpisode, episode="e1") == "wire.oversized"
+    crane.put_rig()

@@ -105,7 +105,7 @@ DISTILLED = {
         {"name": "clone", "method": "clone", "provenance": {"seed": 1}},
         {"name": "proximal", "method": "proximal-online", "provenance": {"seed": 1}},
     ],
-    "result": {"chosen": {"name": "proximal"}},
+    "result": {"chosen": {"name": "proximal"}, "huge": 2**70},
 }
 
 
@@ -117,7 +117,7 @@ def test_what_a_job_left_while_the_keeper_was_away_is_taken_in(
     stopped_keeper.start()
     reply = ended(client, job)
     assert (reply.state, reply.versions, reply.fraction) == ("done", (1, 2), 1.0)
-    assert reply.result == {"chosen": {"name": "proximal"}}
+    assert reply.result == {"chosen": {"name": "proximal"}, "huge": str(2**70)}
     rows = client.ask(ListVersions, VersionsReply, rig="yard-crane").versions
     assert [(row["method"], row["state"], row["parent"], row["job"]) for row in rows] == [
         ("clone", "drafted", None, job),
