@@ -37,12 +37,12 @@ class Desk:
 
     Args:
         address: the desk lane.
-        timeout_s: how long to wait for an answer.
+        timeout_s: how long to wait for an answer; may be changed between questions.
     """
 
     def __init__(self, address: str = DESK_ADDRESS, timeout_s: float = 10.0) -> None:
         self._address = address
-        self._timeout_s = timeout_s
+        self.timeout_s = timeout_s
         self._prefix = secrets.token_hex(6)
         self._asked = 0
         self._open()
@@ -96,7 +96,7 @@ class Desk:
         return answer
 
     def _exchange(self, frame: bytes, identifier: str, *, kind: str, request: type[DeskRequest]) -> Message:
-        end_s = time.monotonic() + self._timeout_s
+        end_s = time.monotonic() + self.timeout_s
         self._forget_old_breaks()
         self._socket.send(frame)
         poller = zmq.Poller()
@@ -120,7 +120,7 @@ class Desk:
                 self._socket.send(frame)
         self._reopen()
         raise LinkError(
-            f"no answer from {self._address} to {kind!r} within {self._timeout_s:g} s; is `nearhand serve` running "
+            f"no answer from {self._address} to {kind!r} within {self.timeout_s:g} s; is `nearhand serve` running "
             "there?",
             code="link.silent",
         )

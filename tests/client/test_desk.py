@@ -148,7 +148,7 @@ def test_a_question_given_up_before_the_service_came_is_never_delivered(counter:
         with pytest.raises(LinkError):
             desk.ask(PutRig, RigReply, toml="", who="test")
         desk_side.start()
-        desk._timeout_s = 10.0
+        desk.timeout_s = 10.0
         desk.ask(ListRigs, RigsReply)
     assert [request.kind for request in desk_side.seen] == ["list-rigs"]
 
