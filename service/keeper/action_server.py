@@ -7,6 +7,7 @@ from collections import deque
 from typing import Any
 
 import zmq
+from zmq.utils.monitor import recv_monitor_message
 
 from nearhand.service.bus.codec import decode, encode
 from nearhand.service.bus.control_messages import CONTROL_REPLIES, Arm, ControlReply, Drain, DrainReply, Latch, Load
@@ -36,6 +37,7 @@ class ActionServer:
         self.socket = make_socket(context, zmq.DEALER, queue=BULK_QUEUE, role="connect")
         # A request for a server that is away must fail at once, not wait and change something later.
         self.socket.setsockopt(zmq.IMMEDIATE, 1)
+        self._monitor = self.socket.get_monitor_socket(zmq.EVENT_DISCONNECTED)
         connect(self.socket, address)
         self.instance = ""
         self.states: dict[str, dict[str, Any]] = {}
@@ -57,6 +59,7 @@ class ActionServer:
 
     def close(self) -> None:
         """Close the socket."""
+        self.socket.disable_monitor()
         self.socket.close(linger=0)
 
     def load(self, rig: RigRow, version: int) -> ControlReply:
@@ -115,6 +118,7 @@ class ActionServer:
         if self._drain is not None and now_s - self._drain[2] > ANSWER_TIMEOUT_S:
             self._drain, self._after = None, 0
             self._ledger.counters["control.silences"] += 1
+        self._notice_losses()
         if self._drain is None and now_s >= self._next_drain_s:
             self._next_drain_s = now_s + DRAIN_INTERVAL_S
             request = Drain(request=self._request(), after=self._after)
@@ -122,12 +126,20 @@ class ActionServer:
                 self.socket.send(encode(request), flags=zmq.NOBLOCK)
                 self._drain = (self._serial, self._after, now_s)
             except zmq.Again:
-                # Gone: its next life counts its occurrences from 1 again.
                 self._after = 0
 
     def pause_s(self) -> float:
         """Return how long the caller may sleep before ``turn`` is due."""
         return 0.0 if self._late else max(0.0, self._next_drain_s - time.monotonic())
+
+    def _notice_losses(self) -> None:
+        """Ask from the beginning after each lost connection.
+
+        The server's next life counts its occurrences from 1, and forgets those that it is told to pass over.
+        """
+        while self._monitor.poll(0):
+            recv_monitor_message(self._monitor)
+            self._after, self._drain = 0, None
 
     def _request(self) -> str:
         self._serial += 1

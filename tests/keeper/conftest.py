@@ -137,6 +137,7 @@ class PretendedServer:
         self._end = threading.Event()
         self._ready = threading.Event()
         self._thread: threading.Thread | None = None
+        self._number = 0
 
     def start(self) -> None:
         """Bind and answer."""
@@ -154,17 +155,19 @@ class PretendedServer:
             assert not self._thread.is_alive()
             self._thread = None
 
-    def begin_life(self, instance: str) -> None:
-        """Start again with nothing in memory."""
+    def begin_life(self, instance: str, *happened: str) -> None:
+        """Start again at once with nothing in memory but what has just happened."""
         self.stop()
-        self.instance, self.states, self.occurrences, self.loads = instance, {}, [], []
+        self.instance, self.states, self.occurrences, self.loads, self._number = instance, {}, [], [], 0
+        for what in happened:
+            self.happen(what)
         self.start()
 
     def happen(self, what: str, rig: str = "yard-crane", **detail: Any) -> None:
         """Note an occurrence."""
         with self._lock:
-            number = len(self.occurrences) + 1
-            self.occurrences.append({"number": number, "utc": "u", "rig": rig, "what": what, "detail": detail})
+            self._number += 1
+            self.occurrences.append({"number": self._number, "utc": "u", "rig": rig, "what": what, "detail": detail})
 
     def wait_for(self, holds: Callable[[PretendedServer], bool]) -> None:
         """Wait, bounded, until something holds; looked at after each answer."""
@@ -191,10 +194,11 @@ class PretendedServer:
     def _answer(self, request: Message) -> Message | None:
         if isinstance(request, Drain):
             self.drained_after.append(request.after)
-            newer = tuple(item for item in self.occurrences if item["number"] > request.after)
+            # As the contract allows: whatever was asked to be passed over may be forgotten.
+            self.occurrences = [item for item in self.occurrences if item["number"] > request.after]
             return DrainReply(
-                request=request.request, instance=self.instance, occurrences=newer, rigs=dict(self.states),
-                counters={"queries": 7},
+                request=request.request, instance=self.instance, occurrences=tuple(self.occurrences),
+                rigs=dict(self.states), counters={"queries": 7},
             )  # fmt: skip
         if isinstance(request, Load):
             if self.silent:

@@ -102,6 +102,22 @@ def test_occurrences_become_events_exactly_once(server: PretendedServer, keeper:
     assert client.ask(VerifyEvents, VerifyReply).intact
 
 
+def test_a_server_that_starts_again_at_once_loses_no_occurrence(
+    server: PretendedServer, keeper: KeeperProcess, client: Client
+) -> None:
+    client.put_rig()
+    for life in range(1, 13):
+        for _ in range(4):
+            server.happen("trip")
+        server.wait_for(lambda it: it.drained_after[-1:] >= [4])
+        # The new life has fewer occurrences than the old one, and forgets those that are passed over.
+        server.drained_after.clear()
+        server.begin_life(f"life-{life + 1}", "armed", "latched")
+        server.wait_for(lambda it: 2 in it.drained_after)
+        assert len(client.events("armed")) == len(client.events("latched")) == life
+    assert client.ask(VerifyEvents, VerifyReply).intact
+
+
 def test_arming_and_halting_are_relayed_and_recorded(
     server: PretendedServer, keeper: KeeperProcess, client: Client
 ) -> None:
