@@ -68,7 +68,7 @@ class Crane:
         count = self._state.shape[1]
         if self._steps >= self.max_steps:
             never = np.zeros(count, dtype=bool)
-            return Step(self._last, np.zeros(count), never, ~never)
+            return Step(self._observed, np.zeros(count), never, ~never)
         demand = o.gain * np.clip(np.asarray(actions, dtype=np.float64)[:, 0], -o.strongest, o.strongest)
         wind = self._wind.next(self._generator)
         rope = self._rope * o.rope_scale
@@ -95,15 +95,14 @@ class Crane:
         self._steps += 1
         score = self._judge()
         over = self._steps >= self.max_steps
-        self._last = self._observe()
-        return Step(self._last, score, np.zeros(count, dtype=bool), np.full(count, over))
+        return Step(self._observe(), score, np.zeros(count, dtype=bool), np.full(count, over))
 
     def _observe(self) -> Array:
         o = self.options
         position, theta, velocity, rate, _ = self._state
         noise = self._generator.standard_normal((3, len(position)))
         seen = quantise(position, o.position_step_m)
-        self._last = np.stack(
+        self._observed: Array = np.stack(
             (
                 seen,
                 velocity + o.velocity_noise * noise[0],
@@ -114,7 +113,7 @@ class Crane:
             ),
             axis=1,
         )
-        return self._last
+        return self._observed
 
     def _judge(self) -> Array:
         """Note rule breaches and return the score of this period, 0 to 1: progress, and calm at the target."""
@@ -138,7 +137,7 @@ class Crane:
 
     def _is_landed(self) -> NDArray[np.bool_]:
         o = self.options
-        return (
+        return np.asarray(
             (np.abs(self._state[0] - self._target) < o.landing_tolerance_m)
             & (self._residual_swing() < o.swing_tolerance_rad)
             & (np.abs(self._state[2]) < 0.05)

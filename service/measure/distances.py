@@ -92,7 +92,7 @@ def mmd_squared(x: Array, y: Array, bandwidth: float) -> float:
     """
 
     def kernel(a: Array, b: Array) -> Array:
-        return np.exp(-squared_gaps(a, b) / (2 * bandwidth**2))
+        return np.asarray(np.exp(-squared_gaps(a, b) / (2 * bandwidth**2)))
 
     n, m = len(x), len(y)
     within_x = (kernel(x, x).sum() - n) / (n * (n - 1))
