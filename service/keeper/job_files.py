@@ -5,13 +5,14 @@ from __future__ import annotations
 import contextlib
 import hashlib
 import shutil
+import traceback
 from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
 
 from nearhand.service.errors import ConflictError, NearhandError, PolicyFormatError, StoreError
 from nearhand.service.jobs.folder import JobFolder
-from nearhand.service.keeper.ledger import Ledger
+from nearhand.service.keeper.ledger import Ledger, log_line
 from nearhand.service.policy.format import read_policy
 from nearhand.service.rigs import Rig
 from nearhand.service.store.canonical import canonical
@@ -28,6 +29,8 @@ SPLITS: dict[str, tuple[str, ...]] = {
     "inspect": (),
 }
 MAX_LOG_TAIL = 8192
+#: Faults of the store that say nothing about a job's result.
+PASSING_CODES = frozenset({"store.full", "store.locked", "store.io", "store.access"})
 
 
 def write_job(store: Store, job: JobRow, folder: JobFolder, progress: str) -> None:
@@ -76,7 +79,8 @@ def chosen_episodes(store: Store, job: JobRow) -> list[EpisodeRow]:
     if not any(needed in (None, row.split) for row in rows):
         by = f" by {', '.join(operators)}" if operators else ""
         raise ConflictError(
-            f"rig {job.rig} has no closed, finite {needed or 'closed'} episodes{by}; collect demonstrations first",
+            f"rig {job.rig} has no closed {f'and finite {needed} ' if needed else ''}episodes{by}; "
+            "collect more demonstrations first",
             code="conflict.no_demonstrations",
         )
     return rows
@@ -203,10 +207,18 @@ def end_failed(ledger: Ledger, job: JobRow, code: str, message: str) -> None:
 
 
 def take_or_fail(ledger: Ledger, job: JobRow, folder: JobFolder) -> None:
-    """Store what a job left behind; a result that cannot be used is the job's failure."""
+    """Store what a job left behind; a result that cannot be used is the job's failure, whatever is wrong with it.
+
+    Raises:
+        StoreError: the store itself cannot take anything at present; nothing was changed.
+    """
     try:
         take_result(ledger, job, folder)
-    except (NearhandError, ValueError, KeyError, TypeError) as error:
+    except Exception as error:
+        if isinstance(error, StoreError) and error.code in PASSING_CODES:
+            raise
+        if not isinstance(error, NearhandError):
+            log_line(f"result-defect job={job.job} message={error!r}\n{traceback.format_exc()}")
         code = error.code if isinstance(error, NearhandError) else "job.result"
         end_failed(ledger, job, code, f"the job's result cannot be used: {error}"[:2000])
 

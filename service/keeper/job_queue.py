@@ -59,7 +59,7 @@ class JobQueue:
         self.progress: dict[int, Progress] = {}
         self._running: Running | None = None
         self._waiting = True
-        self._resume()
+        self._resumed = False
 
     def folder(self, job: int) -> JobFolder:
         """Return a job's folder."""
@@ -85,7 +85,14 @@ class JobQueue:
         return row
 
     def turn(self) -> None:
-        """Take in progress, look after the running job, start the next one."""
+        """Take in progress, look after the running job, start the next one.
+
+        Raises:
+            StoreError: the store cannot take a result at present; the next turn tries again.
+        """
+        if not self._resumed:
+            self._resume()
+            self._resumed = True
         self._take_progress()
         if self._running is not None:
             self._look_after(self._running)

@@ -69,7 +69,10 @@ def judge_version(office: Office, rig: RigRow, measurement: MeasurementRow, pres
             _unmet("rig", f"the description of {rig.rig.name} has changed since the measurement; measure again")
         )
     reference = office.ledger.store.versions.measurement(present) if present else None
-    bounds += [plain(bound) for bound in judge(rig.rig.gate, measurement.content, reference and reference.content)]
+    if reference is not None and reference.machine_digest != measurement.machine_digest:
+        reference = None
+    in_service = reference.content if reference else None
+    bounds += [plain(bound) for bound in judge(rig.rig.gate, measurement.content, in_service)]
     return bounds
 
 

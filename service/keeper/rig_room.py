@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import contextlib
+
 from nearhand.service.bus.control_messages import ControlReply
 from nearhand.service.bus.desk_messages import GetRig, Halt, ListRigs, PutRig, Rearm, RigReply, RigsReply, RigStateReply
 from nearhand.service.errors import ConflictError, LinkError
@@ -23,7 +25,8 @@ def put_rig(office: Office, request: PutRig) -> RigReply:
     rigs = office.ledger.store.rigs
     known = rigs.find(rig.name)
     if known is not None and known.digest == rig.digest():
-        office.server.ensure(known)
+        with contextlib.suppress(LinkError):
+            office.server.ensure(known)
         return _reply(office, request.request, known)
     if known is not None and _channels(known.rig) != _channels(rig) and rigs.is_bound(rig.name):
         raise ConflictError(

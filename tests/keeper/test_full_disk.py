@@ -11,6 +11,7 @@ import pytest
 from nearhand.service.bus.desk_messages import Release, ReleaseReply
 from nearhand.service.bus.message import ErrorReply, Message
 from nearhand.service.config import ServiceSettings
+from nearhand.service.jobs.folder import JobFolder
 from nearhand.service.keeper.process import Keeper
 from nearhand.service.rigs import rig_from_toml
 from nearhand.service.store.rigs import machine_digest
@@ -101,5 +102,29 @@ def test_a_release_that_cannot_be_recorded_is_taken_back(
         released = here.during(lambda: client.ask(Release, ReleaseReply, version=1, who="ann"))
         assert released.released
         assert here.keeper.store.versions.in_service("yard-crane") == 1
+    finally:
+        here.keeper.close()
+
+
+def test_a_result_that_finds_no_room_is_taken_in_later(
+    settings: ServiceSettings, server: PretendedServer, samples: Samples
+) -> None:
+    rig = rig_from_toml(samples.rig_toml)
+    store = Store(settings.database)
+    store.rigs.put(rig, samples.rig_toml, "w")
+    job = store.jobs.begin(store.jobs.add("inspect", rig.name, {}, who="w", why="").job)
+    store.close()
+    folder = JobFolder(settings.jobs / "job-000001")
+    folder.write_json("job.json", {"job": 1, "kind": "inspect", "rig": rig.model_dump(mode="json"), "options": {}})
+    folder.write_json("result.json", {"state": "done", "result": {"words": "x" * 20_000}})
+    here = InProcess(settings)
+    try:
+        here.limit(0)
+        for _ in range(3):
+            here.keeper.turn()
+        assert here.keeper.store.jobs.get(job.job).state == "running"
+        here.limit(None)
+        here.keeper.turn()
+        assert here.keeper.store.jobs.get(job.job).state == "done"
     finally:
         here.keeper.close()

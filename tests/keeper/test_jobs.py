@@ -157,6 +157,8 @@ def test_a_damaged_policy_file_fails_the_job_as_a_whole(
         (DISTILLED, (), "store.failed"),
         ({**DISTILLED, "versions": [{"method": "clone"}]}, (), "job.result"),
         ({**DISTILLED, "versions": "two"}, (), "job.result"),
+        ({**DISTILLED, "versions": ["one"]}, (), "job.result"),
+        ({**DISTILLED, "result": ["one"]}, (), "job.result"),
         ({"state": "failed", "code": "learn.diverged", "message": "the loss is not finite"}, (), "learn.diverged"),
         ({}, (), "job.failed"),
     ],
