@@ -71,3 +71,33 @@ def gate_table(reply: ReleaseReply) -> RenderableType:
         table.add_row("yes" if bound.get("met") else "NO", str(bound.get("sentence", "")))
     verdict = f"version {reply.version} is in service" if reply.released else f"version {reply.version} was refused"
     return Group(Text(f"{verdict}. {reply.message}".strip()), table) if reply.bounds else Text(verdict)
+
+
+def inspection_tables(result: Mapping[str, Any]) -> tuple[RenderableType, ...]:
+    """Return what was found of the episodes, and what to do about it."""
+    from rich.table import Table
+    from rich.text import Text
+
+    table = Table(title=f"demonstrations of {result.get('rig', '?')}", title_justify="left")
+    for name in ("episode", "operator", "use", "outcome"):
+        table.add_column(name)
+    for name in ("s", "idle ends s", "saturated %", "gaps", "jitter %"):
+        table.add_column(name, justify="right")
+    for row in result.get("episodes", []):
+        saturated = max(row.get("saturation", {}).values(), default=0.0)
+        table.add_row(
+            str(row.get("episode", ""))[:12],
+            str(row.get("operator", "")),
+            str(row.get("split", "")),
+            str(row.get("outcome", "")),
+            f"{row.get('duration_s', 0.0):.1f}",
+            f"{row.get('idle_start_s', 0.0):.1f} / {row.get('idle_end_s', 0.0):.1f}",
+            f"{100 * saturated:.1f}",
+            str(_count(row.get("gaps"))),
+            "–" if row.get("jitter") is None else f"{100 * float(row['jitter']):.1f}",
+        )
+    return (table, *(Text(f"• {verdict['sentence']}") for verdict in result.get("verdicts", [])))
+
+
+def _count(value: object) -> object:
+    return len(value) if isinstance(value, list | tuple) else value
