@@ -21,6 +21,9 @@ LOOKS = 40
 #: plants a well converged fit drives better than its action error tells.
 PATIENCE_NATS = 0.1
 LOG_TWO_PI = float(np.log(2 * np.pi))
+#: Degrees of freedom of the heavy-tailed error model, how many scales are tried, and -log of its density at zero.
+FREEDOM, SCALES = 2.0, 60
+T_CONSTANT = 0.5 * float(np.log(8.0))
 
 
 @dataclass(frozen=True)
@@ -42,8 +45,8 @@ class Clone:
     """A cloned actor, the steps it took, and its errors along the way.
 
     ``held_out`` are the indices of the episodes kept out for early stopping. ``probe`` is the actor that never saw
-    them: ``actor`` itself if they were spared for good, another one if all were fitted in the end, None if there was
-    but one episode. ``curves`` holds ``train_nll`` and ``held_out_nll`` (nats per channel and sample, at each look).
+    them: ``actor`` itself if they were ``spared``, another one or None if all were fitted.
+    ``curves`` holds ``train_nll`` and ``held_out_nll`` (nats per channel and sample, at each look).
     """
 
     actor: Actor
@@ -65,13 +68,20 @@ def residual_sd(actor_mean: Float32, actions: Float32, weights: Float32, floor: 
 
 
 def held_out_nll(actor: Actor, demonstrations: Sequence[Demonstration], floor: float) -> float:
-    """Return the negative log-likelihood per channel and sample on whole episodes, at these episodes' own spread.
+    """Return the negative log-likelihood per channel and sample of whole episodes under a heavy-tailed error model.
 
-    The standard deviation is the best one for the episodes asked about: that of the training residuals says nothing
-    about new episodes once the network nearly interpolates, and would make any later look appear worse.
+    A Student-t with two degrees of freedom at its best scale, per channel. An expert that switches between two ways of
+    driving leaves a few huge errors wherever the policy switches a moment earlier or later; under a Gaussian these few
+    outweigh all the rest and favour a blurred, under-trained network that drives worse. The scale is that of the
+    episodes asked about: training residuals say nothing of new episodes once the network nearly interpolates.
+
+    Source: Student-t regression (Lange, Little & Taylor 1989; from memory).
     """
-    sd = held_out_sd(actor, demonstrations, floor)
-    return float(np.mean(np.log(sd)) + 0.5 * LOG_TWO_PI + 0.5)
+    errors = np.concatenate([np.abs(item.actions - actor.mean(item.windows[:-1])) for item in demonstrations])
+    scales = np.geomspace(floor, max(10 * floor, 4.0), SCALES)[:, None, None]
+    ratio = np.square(errors.astype(np.float64) / scales) / FREEDOM
+    nll = np.log(scales[:, :, 0]) + 0.5 * (FREEDOM + 1) * np.log1p(ratio).mean(axis=1) + T_CONSTANT
+    return float(nll.min(axis=0).mean())
 
 
 def held_out_sd(actor: Actor, demonstrations: Sequence[Demonstration], floor: float) -> Float32:
@@ -87,11 +97,10 @@ def _fit(
     held_out: Sequence[Demonstration],
     recipe: CloneRecipe,
     seed: Sequence[int],
-    stop_at: int | None,
     tell: Tell,
     stopped: Callable[[], bool],
 ) -> tuple[Actor, int, dict[str, list[float]]]:
-    """Fit one network; return the latest look near the best held-out one, or step ``stop_at`` if none is held out."""
+    """Fit one network; return the latest look near the best held-out one, or the last if none is held out."""
     generator = np.random.default_rng(seed)
     windows, actions, weights = stack_pairs(train)
     inputs, targets, row_weights = (torch.from_numpy(array) for array in (windows, actions, weights))
@@ -101,9 +110,8 @@ def _fit(
     every = max(recipe.steps // LOOKS, 1)
     looks: list[tuple[float, int, Tensor]] = []
     curves: dict[str, list[float]] = {"train_nll": [], "held_out_nll": []}
-    end = recipe.steps if stop_at is None else stop_at
     batches: list[np.ndarray[tuple[int], np.dtype[np.int64]]] = []
-    for step in range(1, end + 1):
+    for step in range(1, recipe.steps + 1):
         if not batches:
             batches = list(draw_batches(generator, len(windows), recipe.batch))
         rows = torch.from_numpy(batches.pop())
@@ -112,7 +120,7 @@ def _fit(
         loss = 0.5 * torch.log((row_weights[rows, None] * errors).mean(dim=0) + floor).sum()
         (gradient,) = torch.autograd.grad(loss, flat)
         optimiser.step(gradient, cosine_rate(recipe.learning_rate, step - 1, recipe.steps))
-        if step % every == 0 or step == end:
+        if step % every == 0 or step == recipe.steps:
             if stopped():
                 raise LearningError("stopped while cloning; the folder can be taken up again", code="learn.stopped")
             actor = Actor(layers, flat.detach(), np.zeros(targets.shape[1], dtype=np.float32))
@@ -127,9 +135,9 @@ def _fit(
                 looks.append((figures["held_out_nll"], step, flat.detach().clone()))
             for name, value in figures.items():
                 curves[name].append(value)
-            tell(step / end, figures)
+            tell(step / recipe.steps, figures)
     if not held_out:
-        return Actor(layers, flat.detach().clone(), np.log(sd)), end, curves
+        return Actor(layers, flat.detach().clone(), np.log(sd)), recipe.steps, curves
     limit = min(nll for nll, _, _ in looks) + PATIENCE_NATS
     _, steps, chosen = next(look for look in reversed(looks) if look[0] <= limit)
     actor = Actor(layers, chosen, np.zeros(targets.shape[1], dtype=np.float32))
@@ -137,12 +145,22 @@ def _fit(
 
 
 def clone(
-    demonstrations: Sequence[Demonstration], recipe: CloneRecipe, seed: int, tell: Tell, stopped: Callable[[], bool]
+    demonstrations: Sequence[Demonstration],
+    recipe: CloneRecipe,
+    seed: int,
+    tell: Tell,
+    stopped: Callable[[], bool],
+    *,
+    probing: bool = False,
 ) -> Clone:
     """Fit a policy to the demonstrations, stopping early by whole episodes that were kept out.
 
-    With fewer than ``recipe.spare_from`` episodes none can be spared for good: the stopping step is found with some
-    kept out, then all are fitted for that long. A single episode is fitted for all the recipe's steps.
+    With fewer than ``recipe.spare_from`` episodes none is spared: the error on one or two episodes is too noisy a guide
+    (it would stop far too soon on plants that the clone drives well), so all are fitted for all the recipe's steps.
+
+    Args:
+        demonstrations, recipe, seed, tell, stopped: see there.
+        probing: if no episode is spared, fit a second network that did not see some of them, to compare with.
 
     Raises:
         LearningError: the fit diverged, or it was told to stop.
@@ -150,25 +168,21 @@ def clone(
     count = len(demonstrations)
     d, m = demonstrations[0].windows.shape[1], demonstrations[0].actions.shape[1]
     layers = Layers((d, *recipe.hidden, m))
-    if count == 1:
-        actor, steps, curves = _fit(layers, demonstrations, (), recipe, (seed, 1, 0), None, tell, stopped)
-        note = "one episode: nothing could be kept out, all steps were taken"
-        return Clone(actor, None, steps, (), False, curves, note)
-    out = hold_out(count, recipe.held_out, np.random.default_rng((seed, 1, 1)))
-    kept = [item for index, item in enumerate(demonstrations) if index not in out]
-    held = [demonstrations[index] for index in out]
-    spare = count >= recipe.spare_from
-    part = 1.0 if spare else 0.5
-    actor, steps, curves = _fit(
-        layers, kept, held, recipe, (seed, 1, 2), None, lambda done, figures: tell(part * done, figures), stopped
-    )
-    indices = tuple(int(index) for index in out)
-    if spare:
+    indices: tuple[int, ...] = ()
+    if count > 1:
+        indices = tuple(int(i) for i in hold_out(count, recipe.held_out, np.random.default_rng((seed, 1, 1))))
+    kept = [item for index, item in enumerate(demonstrations) if index not in indices]
+    held = [demonstrations[index] for index in indices]
+    if count >= recipe.spare_from:
+        actor, steps, curves = _fit(layers, kept, held, recipe, (seed, 1, 2), tell, stopped)
         return Clone(actor, actor, steps, indices, True, curves, f"{len(held)} of {count} episodes kept out")
-    probe = actor
-    actor, _, again = _fit(
-        layers, demonstrations, (), recipe, (seed, 1, 2), steps, lambda done, f: tell(0.5 + 0.5 * done, f), stopped
+    part = 0.5 if probing and held else 1.0
+    actor, steps, curves = _fit(
+        layers, demonstrations, (), recipe, (seed, 1, 2), lambda done, figures: tell(part * done, figures), stopped
     )
-    curves = {name: values + again[name] for name, values in curves.items()}
-    note = f"steps chosen with {len(held)} of {count} episodes out, then all fitted"
-    return Clone(actor, probe, steps, indices, False, curves, note)
+    probe = None
+    if part < 1:
+        probe, _, _ = _fit(
+            layers, kept, (), recipe, (seed, 1, 2), lambda done, figures: tell(0.5 + part * done, figures), stopped
+        )
+    return Clone(actor, probe, steps, indices, False, curves, "too few episodes to spare one: all fitted to the end")

@@ -196,6 +196,7 @@ def _clone(folder: JobFolder, lesson: Lesson, reporter: Reporter, stopped: Stopp
     made = clone(
         lesson.demonstrations, lesson.recipe.clone, lesson.recipe.seed,
         lambda done, figures: reporter.report("cloning", done, figures), stopped,
+        probing=lesson.recipe.method == "proximal-offline" or lesson.rig.simulator is None,
     )  # fmt: skip
     facts = {
         "identity": lesson.identity, "steps": made.steps, "held_out": made.held_out, "curves": made.curves,
