@@ -29,8 +29,10 @@ from nearhand.service.bus.desk_messages import DESK_REPLIES, EventsReply, ListEv
 from nearhand.service.bus.intake_messages import INTAKE_REPLIES, Ack, Chunk, CloseEpisode, OpenEpisode
 from nearhand.service.bus.message import ErrorReply, Message
 from nearhand.service.config import ServiceSettings
+from nearhand.service.keeper.process import Keeper
 from nearhand.service.policy.format import PolicyFile, write_policy
 from nearhand.service.policy.network import Policy
+from nearhand.service.process import StopSignal
 
 ANSWER_MS = 20_000
 Reply = TypeVar("Reply", bound=Message)
@@ -360,6 +362,24 @@ class KeeperProcess:
         return (self._file.parent / "keeper.log").read_text()
 
 
+class StopByHand(StopSignal):
+    """A stop signal that no signal sets."""
+
+    def __init__(self) -> None:
+        self.stopped = False
+        self.fileno_read, self._hand = os.pipe()
+
+    def give(self) -> None:
+        """Stop."""
+        self.stopped = True
+        os.write(self._hand, b"x")
+
+    def close(self) -> None:
+        """Give the descriptors back."""
+        os.close(self.fileno_read)
+        os.close(self._hand)
+
+
 @pytest.fixture(scope="session")
 def samples() -> Samples:
     """A crane and messages about it."""
@@ -400,6 +420,27 @@ def keeper(stopped_keeper: KeeperProcess) -> KeeperProcess:
     """A running keeper."""
     stopped_keeper.start()
     return stopped_keeper
+
+
+@pytest.fixture
+def keeper_thread(settings: ServiceSettings) -> Iterator[None]:
+    """A running keeper in a thread of its own: the same but for the process, and there at once."""
+    stop, ready = StopByHand(), threading.Event()
+
+    def run() -> None:
+        keeper = Keeper(settings)
+        ready.set()
+        keeper.run(stop)
+        keeper.close()
+
+    thread = threading.Thread(target=run, name="keeper")
+    thread.start()
+    assert ready.wait(20)
+    yield
+    stop.give()
+    thread.join(20)
+    assert not thread.is_alive()
+    stop.close()
 
 
 @pytest.fixture

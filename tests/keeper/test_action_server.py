@@ -31,7 +31,7 @@ def await_server(client: Client) -> None:
 
 
 def test_a_new_rig_is_loaded_before_put_rig_is_answered(
-    server: PretendedServer, keeper: KeeperProcess, client: Client
+    server: PretendedServer, keeper_thread: None, client: Client
 ) -> None:
     await_server(client)
     client.put_rig()
@@ -41,7 +41,7 @@ def test_a_new_rig_is_loaded_before_put_rig_is_answered(
 
 
 def test_a_description_that_the_server_refuses_is_not_stored(
-    server: PretendedServer, keeper: KeeperProcess, client: Client, samples: Samples
+    server: PretendedServer, keeper_thread: None, client: Client, samples: Samples
 ) -> None:
     await_server(client)
     server.refuse = "config.rig"
@@ -51,7 +51,7 @@ def test_a_description_that_the_server_refuses_is_not_stored(
 
 
 def test_a_server_that_comes_later_gets_what_it_missed(
-    server: PretendedServer, keeper: KeeperProcess, client: Client
+    server: PretendedServer, keeper_thread: None, client: Client
 ) -> None:
     server.stop()
     client.put_rig()
@@ -59,9 +59,7 @@ def test_a_server_that_comes_later_gets_what_it_missed(
     server.wait_for(lambda it: it.loads == [("yard-crane", 0)])
 
 
-def test_a_new_life_of_the_server_is_loaded_again(
-    server: PretendedServer, keeper: KeeperProcess, client: Client
-) -> None:
+def test_a_new_life_of_the_server_is_loaded_again(server: PretendedServer, keeper_thread: None, client: Client) -> None:
     client.put_rig()
     server.wait_for(lambda it: ("yard-crane", 0) in it.loads)
     server.begin_life("life-2")
@@ -70,7 +68,7 @@ def test_a_new_life_of_the_server_is_loaded_again(
 
 
 def test_a_load_that_is_wrong_at_the_server_is_put_right(
-    server: PretendedServer, keeper: KeeperProcess, client: Client
+    server: PretendedServer, keeper_thread: None, client: Client
 ) -> None:
     client.put_rig()
     server.wait_for(lambda it: ("yard-crane", 0) in it.loads)
@@ -103,7 +101,7 @@ def test_occurrences_become_events_exactly_once(server: PretendedServer, keeper:
 
 
 def test_a_server_that_starts_again_at_once_loses_no_occurrence(
-    server: PretendedServer, keeper: KeeperProcess, client: Client
+    server: PretendedServer, keeper_thread: None, client: Client
 ) -> None:
     client.put_rig()
     for life in range(1, 13):
@@ -119,7 +117,7 @@ def test_a_server_that_starts_again_at_once_loses_no_occurrence(
 
 
 def test_arming_and_halting_are_relayed_and_recorded(
-    server: PretendedServer, keeper: KeeperProcess, client: Client
+    server: PretendedServer, keeper_thread: None, client: Client
 ) -> None:
     client.put_rig()
     server.wait_for(lambda it: "yard-crane" in it.states)
@@ -133,7 +131,7 @@ def test_arming_and_halting_are_relayed_and_recorded(
 
 
 def test_a_silent_or_absent_server_is_told_and_nothing_is_recorded(
-    server: PretendedServer, keeper: KeeperProcess, client: Client
+    server: PretendedServer, keeper_thread: None, client: Client
 ) -> None:
     client.put_rig()
     server.wait_for(lambda it: "yard-crane" in it.states)
@@ -146,7 +144,7 @@ def test_a_silent_or_absent_server_is_told_and_nothing_is_recorded(
 
 
 def test_the_feed_tells_of_events_and_of_changed_rigs(
-    server: PretendedServer, keeper: KeeperProcess, client: Client, settings: ServiceSettings, context: object
+    server: PretendedServer, keeper_thread: None, client: Client, settings: ServiceSettings, context: object
 ) -> None:
     assert isinstance(context, zmq.Context)
     feed = context.socket(zmq.SUB)
@@ -171,7 +169,7 @@ def test_the_feed_tells_of_events_and_of_changed_rigs(
     assert all(state["mode"] in ("armed", "latched") for state in states)
 
 
-def test_health_shows_the_servers_view(server: PretendedServer, keeper: KeeperProcess, client: Client) -> None:
+def test_health_shows_the_servers_view(server: PretendedServer, keeper_thread: None, client: Client) -> None:
     client.put_rig()
     reply = client.until(lambda it: "mode" in it.rigs["yard-crane"], GetHealth, HealthReply)
     assert reply.rigs["yard-crane"] == {"mode": "latched", "version": 0, "reasons": 2048, "in_service": 0}

@@ -22,11 +22,11 @@ from nearhand.service.bus.message import ErrorReply, Message
 from nearhand.service.episodes.episode import split_of
 
 if TYPE_CHECKING:
-    from tests.keeper.conftest import Client, KeeperProcess, Samples
+    from tests.keeper.conftest import Client, Samples
 
 
 @pytest.fixture
-def crane(keeper: KeeperProcess, client: Client) -> Client:
+def crane(keeper_thread: None, client: Client) -> Client:
     """A client of a keeper that knows the crane."""
     client.put_rig()
     return client
@@ -170,9 +170,7 @@ def test_a_flood_is_stored_in_few_transactions_and_acknowledged_in_order(crane: 
     assert crane.ask(GetHealth, HealthReply).counters["intake.transactions"] < 200
 
 
-def test_both_kinds_of_client_socket_get_their_envelope_back(
-    crane: Client, samples: Samples, keeper: KeeperProcess
-) -> None:
+def test_both_kinds_of_client_socket_get_their_envelope_back(crane: Client, samples: Samples) -> None:
     frame = encode(samples.open("e1"))
     assert len(crane.raw("intake", frame)) == 1
     with_delimiter = crane.raw("intake", b"", frame)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import os
 import signal
 from collections.abc import Sequence
@@ -57,12 +58,27 @@ def ended(client: Client, job: int) -> JobReply:
     return client.until(lambda reply: reply.state in ENDED, GetJob, JobReply, job=job)
 
 
-def hold(keeper: KeeperProcess, client: Client, job: int) -> int:
-    """Stop a job's process as soon as it runs, long before it has loaded its libraries; returns its number."""
+def hold(keeper: KeeperProcess, client: Client, job: int, *, listening: bool = False) -> int:
+    """Stop a job's process as soon as it runs, or as soon as it listens to SIGTERM; returns its number."""
     client.until(lambda reply: reply.state == "running", GetJob, JobReply, job=job)
     (number,) = keeper.children()
+    while listening and not handles_sigterm(number):
+        pass
     os.kill(number, signal.SIGSTOP)
     return number
+
+
+def handles_sigterm(number: int) -> bool:
+    """Tell whether a process has its own handler for SIGTERM (proc(5), SigCgt)."""
+    lines = Path(f"/proc/{number}/status").read_text().splitlines()
+    (mask,) = (line.split()[1] for line in lines if line.startswith("SigCgt"))
+    return bool(int(mask, 16) >> (signal.SIGTERM - 1) & 1)
+
+
+def let_go(number: int) -> None:
+    """Let a stopped process go on; one that had no handler yet may be dead already."""
+    with contextlib.suppress(ProcessLookupError):
+        os.kill(number, signal.SIGCONT)
 
 
 def folder_of(settings: ServiceSettings, job: int) -> JobFolder:
@@ -234,7 +250,7 @@ def test_a_distillation_never_sees_what_is_held_out(
     assert (content["job"], content["kind"], content["rig"]["name"]) == (job, "distil", "yard-crane")
     assert content["given"]["episodes"] == {"train": 4, "calibration": 2}
     stocked.ask(CancelJob, JobReply, job=job, who="ann")
-    os.kill(number, signal.SIGCONT)
+    let_go(number)
 
 
 def test_a_measurement_is_given_the_policies_to_compare(
@@ -256,7 +272,7 @@ def test_a_measurement_is_given_the_policies_to_compare(
     }  # fmt: skip
     assert [one.split for one in folder.read_episodes()] == ["train", "held-out", "train"]
     client.ask(CancelJob, JobReply, job=job, who="ann")
-    os.kill(number, signal.SIGCONT)
+    let_go(number)
 
 
 def test_options_that_cannot_be_used_are_refused_at_once(stocked: Client) -> None:
@@ -298,7 +314,7 @@ def test_a_job_can_be_cancelled_before_and_while_it_runs(
     assert stocked.ask(CancelJob, JobReply, job=first, who="ben", why="wrong data").state == "cancelled"
     assert stocked.refused(CancelJob, job=first, who="ben") == "conflict.job_ended"
     assert stocked.ask(GetJob, JobReply, job=third).state == "queued"
-    os.kill(number, signal.SIGCONT)
+    let_go(number)
     assert ended(stocked, third).state == "done"
     assert [stocked.ask(GetJob, JobReply, job=job).state for job in (first, second)] == ["cancelled", "cancelled"]
     assert not folder_of(settings, first).path.exists()
@@ -307,7 +323,7 @@ def test_a_job_can_be_cancelled_before_and_while_it_runs(
 
 def test_a_job_that_does_not_listen_is_killed(stocked: Client, keeper: KeeperProcess) -> None:
     first, second = start(stocked, "inspect"), start(stocked, "inspect")
-    hold(keeper, stocked, first)
+    hold(keeper, stocked, first, listening=True)
     stocked.ask(CancelJob, JobReply, job=first, who="ben")
     # It stays stopped, so that only SIGKILL can end it.
     assert ended(stocked, second).state == "done"
@@ -320,7 +336,7 @@ def test_a_job_goes_on_after_the_keeper_was_away(stocked: Client, keeper: Keeper
     number = hold(keeper, stocked, job)
     if end == "kill":
         keeper.kill()
-        os.kill(number, signal.SIGCONT)
+        let_go(number)
     else:
         assert keeper.stop() == 0
         assert not Path(f"/proc/{number}").exists()
@@ -343,6 +359,6 @@ def test_progress_is_shown_and_strange_messages_are_counted(
     reply = stocked.until(lambda it: it.stage == "looking", GetJob, JobReply, job=job)
     assert (reply.fraction, reply.eta_s, reply.figures) == (0.25, 3.0, {"loss": 0.5})
     assert stocked.ask(GetHealth, HealthReply).counters["jobs.strange_messages"] == 2
-    os.kill(number, signal.SIGCONT)
+    let_go(number)
     assert ended(stocked, job).state == "done"
     sender.close(linger=0)

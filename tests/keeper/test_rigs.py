@@ -40,7 +40,7 @@ def test_the_desk_tells_where_the_lanes_are(client: Client, keeper: KeeperProces
 
 
 def test_a_rig_is_registered_once_and_its_changes_are_recorded(
-    client: Client, keeper: KeeperProcess, samples: Samples
+    client: Client, keeper_thread: None, samples: Samples
 ) -> None:
     first = client.put_rig()
     rig = rig_from_toml(samples.rig_toml)
@@ -57,7 +57,7 @@ def test_a_rig_is_registered_once_and_its_changes_are_recorded(
 
 
 def test_a_bad_description_is_refused_with_the_field_that_is_wrong(
-    client: Client, keeper: KeeperProcess, samples: Samples
+    client: Client, keeper_thread: None, samples: Samples
 ) -> None:
     assert client.refused(PutRig, who="w", toml="name = ") == "config.toml"
     assert client.refused(PutRig, who="w", toml=samples.rig_toml.replace("period_s", "periode")) == "config.rig"
@@ -68,7 +68,7 @@ def test_a_bad_description_is_refused_with_the_field_that_is_wrong(
     assert client.ask(ListRigs, RigsReply).rigs == ()
 
 
-def test_channels_with_episodes_on_them_stay(client: Client, keeper: KeeperProcess, samples: Samples) -> None:
+def test_channels_with_episodes_on_them_stay(client: Client, keeper_thread: None, samples: Samples) -> None:
     client.put_rig()
     renamed = samples.rig_toml.replace('"swing"', '"sway"')
     client.put_rig(renamed)
@@ -78,7 +78,7 @@ def test_channels_with_episodes_on_them_stay(client: Client, keeper: KeeperProce
     client.put_rig(samples.rig_toml.replace("high = 12.0", "high = 11.0"))
 
 
-def test_names_that_are_not_there_say_so(client: Client, keeper: KeeperProcess) -> None:
+def test_names_that_are_not_there_say_so(client: Client, keeper_thread: None) -> None:
     assert client.refused(GetRig, rig="nobody") == "unknown.rig"
     assert client.refused(ListEpisodes, rig="nobody") == "unknown.rig"
     assert client.refused(ListVersions, rig="nobody") == "unknown.rig"
@@ -86,7 +86,7 @@ def test_names_that_are_not_there_say_so(client: Client, keeper: KeeperProcess) 
     assert client.ask(ListVersions, VersionsReply, rig="yard-crane").versions == ()
 
 
-def test_health_counts_and_the_record_verifies(client: Client, keeper: KeeperProcess) -> None:
+def test_health_counts_and_the_record_verifies(client: Client, keeper_thread: None) -> None:
     client.put_rig()
     client.raw("desk", b"\xc1")
     health = client.ask(GetHealth, HealthReply)
