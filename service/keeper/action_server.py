@@ -171,6 +171,8 @@ class ActionServer:
             elif isinstance(message, ErrorReply):
                 raise error_from_code(message.code, f"the action server refused: {message.message}")
             elif isinstance(message, ControlReply):
+                told = {"mode": message.mode, "version": message.version, "reasons": message.reasons}
+                self.states[message.rig] = {**self.states.get(message.rig, {}), **told}
                 return message
         raise LinkError(
             f"the action server did not answer within {ANSWER_TIMEOUT_S:g} s; nothing was changed; try again",

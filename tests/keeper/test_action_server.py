@@ -123,6 +123,7 @@ def test_arming_and_halting_are_relayed_and_recorded(
     server.wait_for(lambda it: "yard-crane" in it.states)
     armed = client.ask(Rearm, RigStateReply, rig="yard-crane", who="ann", why="checked the hook")
     assert (armed.mode, armed.version) == ("armed", 0)
+    assert client.ask(GetHealth, HealthReply).rigs["yard-crane"]["mode"] == "armed"
     halted = client.ask(Halt, RigStateReply, rig="yard-crane", who="ben", why="somebody in the bay")
     assert halted.mode == "latched"
     recorded = [(event["what"], event["who"], event["why"]) for event in client.events("rearm", "halt")]
