@@ -27,8 +27,8 @@ class DesignedOptions(Frozen):
     """Weights and margins of the designed controller."""
 
     feed_forward: Positive = 0.45
-    position_weight: Positive = 4.0
-    velocity_weight: Positive = 1.0
+    position_weight: Positive = 20.0
+    velocity_weight: Positive = 10.0
     swing_weight: Positive = 40.0
     swing_rate_weight: Positive = 1.0
     action_weight: Positive = 8.0

@@ -111,7 +111,7 @@ def energy_distance_squared(x: Array, y: Array) -> float:
 
 def squared_gaps(a: Array, b: Array) -> Array:
     """Return squared distances (len(a), len(b))."""
-    return np.maximum((a**2).sum(1)[:, None] + (b**2).sum(1)[None, :] - 2 * a @ b.T, 0.0)
+    return np.asarray(np.maximum((a**2).sum(1)[:, None] + (b**2).sum(1)[None, :] - 2 * a @ b.T, 0.0))
 
 
 def median_bandwidth(x: Array) -> float:
