@@ -14,6 +14,7 @@ from pydantic import ValidationError
 from nearhand.service.episodes.agreement import Samples, coverage, disagreement, pool
 from nearhand.service.episodes.episode import Episode
 from nearhand.service.episodes.lag import estimate_lag
+from nearhand.service.episodes.motion import Motion, learn_motion
 from nearhand.service.episodes.quality import idle_ends, not_finite, outside, repeats, saturation, stuck_channels
 from nearhand.service.episodes.timing import judge_times
 from nearhand.service.episodes.verdicts import verdicts
@@ -49,9 +50,10 @@ def inspect_episodes(rig: Rig, episodes: Sequence[Episode], *, told: Told = _sil
     lively = np.zeros(len(rig.observations), dtype=np.bool_)
     if usable:
         lively = np.median([repeats(episode) for episode in usable], axis=0) < LIVELY_REPEATS
+    motion = learn_motion(usable) if usable else None
     rows = []
     for number, episode in enumerate(episodes):
-        rows.append(_row(rig, episode, lively))
+        rows.append(_row(rig, episode, lively, motion))
         told("episodes", (number + 1) / len(episodes))
     told("together", 0.0)
     samples = pool(usable) if usable else None
@@ -75,7 +77,7 @@ def inspect_episodes(rig: Rig, episodes: Sequence[Episode], *, told: Told = _sil
     return result
 
 
-def _row(rig: Rig, episode: Episode, lively: NDArray[np.bool_]) -> dict[str, Any]:
+def _row(rig: Rig, episode: Episode, lively: NDArray[np.bool_], motion: Motion | None) -> dict[str, Any]:
     finite_times = episode.times_s[np.isfinite(episode.times_s)]
     idle_start_s, idle_end_s = idle_ends(rig, episode)
     beyond = [*outside(rig.observations, episode.observations), *outside(rig.actions, episode.actions)]
@@ -92,7 +94,7 @@ def _row(rig: Rig, episode: Episode, lively: NDArray[np.bool_]) -> dict[str, Any
         "saturation": _by_name([channel.name for channel in rig.actions], saturation(rig, episode.actions)),
         "idle_start_s": idle_start_s,
         "idle_end_s": idle_end_s,
-        "stuck": stuck_channels(rig, episode, lively),
+        "stuck": [] if motion is None else stuck_channels(rig, episode, lively, motion),
         "not_finite": not_finite(episode),
         "outside": {name: float(part) for name, part in zip(names, beyond, strict=True) if part > 0},
     }

@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from nearhand.service.episodes.episode import Episode
+from nearhand.service.episodes.motion import Motion
 from nearhand.service.rigs import Channel, Rig
 
 #: At a limit means within this fraction of half the range (common practice).
@@ -16,9 +17,11 @@ SATURATION_MARGIN = 1e-3
 #: Still means: action this close to rest, and observations this slow, both as fractions of a channel's range.
 IDLE_ACTION = 0.01
 IDLE_PER_S = 0.01
-#: A channel is stuck when it repeats one value for this long, and at least this many samples, while others move.
+#: A channel is stuck when it repeats one value for this long, and at least this many samples, while the others make
+#: one expect this share of its usual motion.
 STUCK_S = 0.5
 STUCK_SAMPLES = 10
+STUCK_MOTION = 0.25
 ROUNDING = 1e-6
 
 
@@ -99,22 +102,18 @@ def repeats(episode: Episode) -> NDArray[np.float64]:
     return np.asarray((_changes(episode.observations) == 0).mean(axis=0))
 
 
-def stuck_channels(rig: Rig, episode: Episode, lively: NDArray[np.bool_]) -> list[str]:
-    """Return the observation channels that repeat one value for long while another channel moves.
+def stuck_channels(rig: Rig, episode: Episode, lively: NDArray[np.bool_], motion: Motion) -> list[str]:
+    """Return the observation channels that repeat one value for long while the others say that they should move.
 
     Args:
         lively: (n,) channels that usually change from sample to sample; the others are constant by nature.
+        motion: forecast of each channel's change, from all demonstrations.
     """
     least = max(STUCK_SAMPLES, round(STUCK_S / rig.timing.period_s))
     found = []
-    for index in np.flatnonzero(lively):
+    for index in map(int, np.flatnonzero(lively)):
         run = longest_run(episode.observations[:, index])
-        if run.length < least:
-            continue
-        others = lively.copy()
-        others[index] = False
-        moves = _changes(episode.observations[run.start : run.stop, others]) != 0
-        if moves.size and moves.mean(axis=0).max() > 0.5:
+        if run.length >= least and motion.expected(episode, index, run.start, run.stop - 1) > STUCK_MOTION:
             found.append(rig.observations[index].name)
     return found
 

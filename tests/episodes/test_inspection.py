@@ -106,6 +106,21 @@ def test_a_stuck_sensor(rig: Rig, good: list[Episode]) -> None:
     assert brief["episodes"][0]["stuck"] == []
 
 
+def test_a_machine_at_rest_is_not_a_stuck_sensor(rig: Rig, good: list[Episode]) -> None:
+    """The position repeats itself because the speed is zero, while the load goes on swinging."""
+
+    def stop(episode: Episode) -> Episode:
+        observations = episode.observations.copy()
+        actions = episode.actions.copy()
+        observations[200:300, 0] = observations[200, 0]
+        observations[199:300, 1] = 0.0
+        actions[200:300] = 0.0
+        return replace(episode, observations=observations, actions=actions)
+
+    result = inspect_episodes(rig, spoilt(good, stop, 5))
+    assert all("position" not in row["stuck"] for row in result["episodes"])
+
+
 def test_a_channel_that_is_constant_by_nature_is_not_stuck(rig: Rig, good: list[Episode]) -> None:
     def with_aim(number: int, episode: Episode) -> Episode:
         return set_value(0, "observations", 0.1 * (number % 5), rows=slice(None))(episode)
