@@ -4,7 +4,11 @@ Nothing here ever raises for a silent, late or wrong service, and nothing waits 
 
 How both ends agree after a trip: when this end's lease runs out it latches and stays silent until the server's
 deadline has passed too, so that the server latches as well (or has been restarted, and is latched). It then asks
-again and follows the server's fallback; the policy acts again only after an operator has re-armed the server.
+again and follows the server's fallback; the policy acts again only after an operator has re-armed the server, which
+cannot be done before the server has latched: arming an armed rig changes nothing.
+
+A program that stops calling ``exchange`` cannot be helped from here: the server's deadline catches it, and the drive
+must stop when its commands cease.
 """
 
 from __future__ import annotations
@@ -23,6 +27,7 @@ from nearhand.service.bus.codec import decode, encode
 from nearhand.service.bus.message import ErrorReply, Message
 from nearhand.service.bus.sockets import ACTION_QUEUE, connect, make_socket
 from nearhand.service.clock import Clock, MonotonicClock
+from nearhand.service.envelope.braking import Guards
 from nearhand.service.envelope.chain import limit
 from nearhand.service.envelope.fallback import FallbackAction
 from nearhand.service.envelope.limits import Float32, Limits
@@ -30,6 +35,8 @@ from nearhand.service.errors import WireError
 from nearhand.service.rigs import Rig
 
 HELLO_EVERY_S = 0.05
+#: Most messages looked at while waiting for one reply; a service that floods the link counts as silent.
+MOST_MESSAGES = 64
 
 
 @dataclass(frozen=True, slots=True)
@@ -70,9 +77,8 @@ class RigLink:
         self._clock = clock or MonotonicClock()
         self._wait_s = rig.timing.period_s if wait_s is None else wait_s
         self._limits = Limits.of(rig)
-        self._fallback = FallbackAction(
-            self._limits, kind=rig.fallback.kind, ramp_per_s=rig.fallback.ramp_per_s, hold_s=rig.fallback.hold_s
-        )
+        self._guards = Guards(self._limits)
+        self._fallback = FallbackAction(self._limits)
         self._context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
         self._socket = make_socket(self._context, zmq.DEALER, queue=ACTION_QUEUE, role="connect")
         connect(self._socket, address)
@@ -100,19 +106,41 @@ class RigLink:
         self.close()
 
     def exchange(self, observation: NDArray[np.floating]) -> Drive:
-        """Send an observation (n,) in the rig's units and return what to do for the next control period."""
-        seen = np.asarray(observation, dtype=np.float32)
-        usable = seen.shape == (len(self._rig.observations),) and bool(np.isfinite(seen).all())
-        if usable:
-            self._fallback.see(seen)
+        """Send an observation (n,) in the rig's units and return what to do for the next control period.
+
+        An observation of the wrong size, or one that is no vector of numbers, goes out as NaN: the server trips on it.
+        """
         begin_ns = self._clock.now_ns()
+        seen = self._vector(observation)
+        usable = bool(np.isfinite(seen).all())
+        if usable:
+            self._fallback.see(seen, begin_ns)
+        self._guards.note(self._held)
         reply = None
         if begin_ns >= self._silent_until_ns and not self._replaced:
             reply = self._ask(seen, begin_ns)
         now_ns = self._clock.now_ns()
         if reply is not None:
-            return self._follow(reply, (now_ns - begin_ns) * 1e-9, now_ns)
-        return self._alone(now_ns, seen=usable)
+            told = self._usable_action(reply)
+            if told is not None:
+                return self._follow(reply, told, seen if usable else None, (now_ns - begin_ns) * 1e-9, now_ns)
+        return self._alone(now_ns)
+
+    def _vector(self, observation: NDArray[np.floating]) -> Float32:
+        size = len(self._rig.observations)
+        try:
+            with np.errstate(over="ignore", invalid="ignore"):
+                seen = np.asarray(observation, dtype=np.float32)
+        except (TypeError, ValueError, OverflowError):
+            seen = np.empty(0, dtype=np.float32)
+        return seen if seen.shape == (size,) else np.full(size, np.nan, dtype=np.float32)
+
+    def _usable_action(self, reply: Action) -> Float32 | None:
+        try:
+            told = unpack(reply.action, len(self._rig.actions), what="action")
+        except WireError:
+            return None
+        return told if np.isfinite(told).all() else None
 
     def _ask(self, observation: Float32, begin_ns: int) -> Action | None:
         """Send the query and wait for just its reply; keep the session open on the way."""
@@ -126,12 +154,15 @@ class RigLink:
         )  # fmt: skip
         if not self._send(message):
             return None
-        while (answer := self._receive(give_up_s)) is not None:
+        for _ in range(MOST_MESSAGES):
+            answer = self._receive(give_up_s)
             if isinstance(answer, Action) and answer.seq == self._seq:
                 return answer
             if isinstance(answer, ErrorReply) and answer.seq == self._seq:
                 self._welcome = not answer.code.startswith(("unknown.", "conflict."))
                 self._replaced = answer.code == "conflict.session"
+                return None
+            if answer is None:
                 return None
         return None
 
@@ -147,8 +178,12 @@ class RigLink:
                     period_s=self._rig.timing.period_s,
                 )
             )
-        while not self._welcome and (answer := self._receive(give_up_s)) is not None:
-            self._welcome = isinstance(answer, Welcome) and answer.session == self._session
+        for _ in range(MOST_MESSAGES):
+            answer = self._receive(give_up_s)
+            if isinstance(answer, Welcome) and answer.session == self._session:
+                self._welcome = True
+            if self._welcome or answer is None:
+                break
         return self._welcome
 
     def _send(self, message: Message) -> bool:
@@ -159,32 +194,36 @@ class RigLink:
         return True
 
     def _receive(self, give_up_s: float) -> Message | None:
-        """Return the next well-formed message, or None when the time is up."""
-        while True:
+        """Return the next well-formed message, or None when the time is up or nothing but garbage comes."""
+        for _ in range(MOST_MESSAGES):
             left_ms = (give_up_s - time.monotonic()) * 1e3
-            if not self._socket.poll(max(0, round(left_ms))):
-                return None
             try:
+                if not self._socket.poll(max(0, round(left_ms))):
+                    return None
                 return decode(self._socket.recv(flags=zmq.NOBLOCK), ACTION_REPLIES)
-            except (WireError, zmq.ZMQError):
+            except WireError:
                 continue
+            except zmq.ZMQError:
+                return None
+        return None
 
-    def _follow(self, reply: Action, round_trip_s: float, now_ns: int) -> Drive:
-        """Do what the server says, after looking at it once more."""
-        try:
-            told = unpack(reply.action, len(self._rig.actions), what="action")
-        except WireError:
-            return self._alone(now_ns, seen=True)
-        if not np.isfinite(told).all():
-            return self._alone(now_ns, seen=True)
+    def _follow(
+        self, reply: Action, told: Float32, observation: Float32 | None, round_trip_s: float, now_ns: int
+    ) -> Drive:
+        """Do what the server says, after looking at it once more with the same envelope.
+
+        Only the server's ``rest`` fallback may jump: a rig that declares it wants rest at once.
+        """
         flags = Reason(reply.reasons)
-        if reply.mode == "armed" or self._rig.fallback.kind != "rest":
-            limited = limit(self._limits, told, self._held, None)
-            action = limited.action
-            flags |= Reason.CLIPPED if limited.clipped and not np.allclose(action, told, atol=1e-5) else Reason.NONE
-            flags |= Reason.SLEWED if limited.slewed and not np.allclose(action, told, atol=1e-5) else Reason.NONE
-        else:
+        if reply.mode != "armed" and self._limits.at_once:
             action = np.minimum(np.maximum(told, self._limits.low), self._limits.high)
+        else:
+            guards = self._guards if reply.mode == "armed" else None
+            limited = limit(self._limits, told, self._held, observation, guards)
+            action = limited.action
+            flags |= Reason.CLIPPED if limited.clipped else Reason.NONE
+            flags |= Reason.SLEWED if limited.slewed else Reason.NONE
+            flags |= Reason.BRAKED if limited.braked else Reason.NONE
         self._latched = False
         self._fallback.end()
         self._held = action
@@ -193,7 +232,7 @@ class RigLink:
         self._standing = Reason(reply.reasons) if reply.mode != "armed" else Reason.NONE
         return Drive(action, reply.mode, reply.version, int(flags), reply.novelty, True, round_trip_s)
 
-    def _alone(self, now_ns: int, *, seen: bool) -> Drive:
+    def _alone(self, now_ns: int) -> Drive:
         """Hold the last action for the rest of its lease, then fall back and latch."""
         if not self._latched and self._held_until_ns is not None and now_ns < self._held_until_ns:
             mode: Mode = "latched" if self._standing else "armed"
@@ -206,6 +245,6 @@ class RigLink:
                 silence_s = self._rig.timing.deadline_s + 2 * self._rig.timing.period_s
                 self._silent_until_ns = now_ns + round(silence_s * 1e9)
             self._held_until_ns = None
-        self._held = self._fallback.act(self._held, now_ns, seen=seen)
+        self._held = self._fallback.act(self._held, now_ns)
         reasons = Reason.LINK | Reason.LATCHED | self._standing
         return Drive(self._held, "latched", 0, int(reasons), 1.0, False, 0.0)

@@ -19,6 +19,8 @@ EXPERT = "#0072B2"
 POLICY = "#D55E00"
 CLONE = "#009E73"
 FLOOR = "#999999"
+#: What stands side by side in the picture of distances: label, colour, marker.
+SERIES = (("this version", POLICY, "o"), ("expert's floor", FLOOR, "s"), ("clone", CLONE, "D"))
 
 
 def _figure(width: float, height: float, rows: int = 1, columns: int = 1) -> tuple[Figure, Any]:
@@ -90,27 +92,24 @@ def distances(figures: Mapping[str, Mapping[str, Any]], names: Sequence[str]) ->
     """Return the figures with their intervals, floor and clone beside them, each in units of its own largest value."""
     made, axes = _figure(7.6, 0.42 * len(names) + 0.8)
     axis = axes[0, 0]
-    kinds = (
-        (None, POLICY, "o", "this version"),
-        ("floor", FLOOR, "s", "expert's floor"),
-        ("clone", CLONE, "D", "clone"),
-    )
     for row, name in enumerate(names):
-        entries = [(figures[name] if key is None else figures[name].get(key), *rest) for key, *rest in kinds]
-        values = [
-            abs(entry[0][end]) for entry in entries if entry[0] for end in ("value", "low", "high") if entry[0].get(end)
-        ]
-        unit = max(values, default=1.0)
-        for offset, (entry, colour, marker, label) in zip((-0.22, 0.0, 0.22), entries, strict=True):
-            if not entry or entry.get("value") is None:
+        beside: list[Mapping[str, Any] | None] = [figures[name], figures[name].get("floor"), figures[name].get("clone")]
+        unit = max((abs(end) for one in beside for end in _ends(one)), default=0.0) or 1.0
+        for one, offset, (label, colour, marker) in zip(beside, (-0.22, 0.0, 0.22), SERIES, strict=True):
+            ends = _ends(one)
+            if one is None or not ends:
                 continue
-            low, high = (entry.get(end) if entry.get(end) is not None else entry["value"] for end in ("low", "high"))
-            axis.plot([low / unit, high / unit], [row + offset] * 2, "-", color=colour, lw=1.6)
-            axis.plot(
-                entry["value"] / unit, row + offset, marker, color=colour, ms=4.5, label=label if row == 0 else None
-            )
+            axis.plot([min(ends) / unit, max(ends) / unit], [row + offset] * 2, "-", color=colour, lw=1.6)
+            axis.plot(one["value"] / unit, row + offset, marker, color=colour, ms=4.5, label=label if not row else None)
     axis.set_yticks(range(len(names)), names, fontsize=8)
     axis.set_ylim(len(names) - 0.5, -0.6)
     axis.set_xlabel("each figure in units of the largest value in its row; bars are 95 % intervals")
     axis.legend(fontsize=8, loc="upper center", bbox_to_anchor=(0.4, 1.12 + 0.5 / len(names)), ncols=3, frameon=False)
     return _svg(made)
+
+
+def _ends(figure: Mapping[str, Any] | None) -> list[float]:
+    """Return value and interval ends as far as they are known; none without a value."""
+    if not figure or figure.get("value") is None:
+        return []
+    return [float(figure[end]) for end in ("value", "low", "high") if figure.get(end) is not None]

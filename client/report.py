@@ -169,6 +169,10 @@ def draw(measurement: Table, curves: Mapping[str, Sequence[float | None]]) -> tu
     return pictures, alt
 
 
+def _whole(figures: Mapping[str, Table]) -> dict[str, dict[str, Any]]:
+    return {name: {"floor": None, "clone": None, **row} for name, row in figures.items()}
+
+
 def _by_operator(episodes: Sequence[Table]) -> list[dict[str, Any]]:
     rows: dict[str, Counter[str]] = {}
     for episode in episodes:

@@ -18,9 +18,14 @@ from nearhand.client.tryout.service_process import ServiceProcess
 from nearhand.configs import builtin_text
 from nearhand.service.bus.codec import MAX_FRAME_BYTES
 from nearhand.service.bus.desk_messages import (
+    EpisodeReply,
     EventsReply,
+    GetEpisode,
     GetHealth,
+    GetJob,
+    GetVersion,
     HealthReply,
+    JobReply,
     ListEvents,
     ListRigs,
     PutRig,
@@ -28,6 +33,7 @@ from nearhand.service.bus.desk_messages import (
     RigsReply,
     VerifyEvents,
     VerifyReply,
+    VersionReply,
     Where,
     WhereReply,
 )
@@ -103,15 +109,15 @@ def hostile_frames() -> list[bytes]:
 @pytest.mark.parametrize("lane", ["action", "intake", "desk"])
 def test_every_bad_frame_gets_an_error_reply(service: ServiceProcess, desk: Desk, context: Context, lane: str) -> None:
     put_crane(desk)
-    socket = context.socket(zmq.DEALER)
-    socket.connect(service.lanes[lane])
-    for frame in hostile_frames():
-        socket.send(frame)
-        assert socket.poll(5_000), f"no reply to {frame[:40]!r}"
-        reply = msgpack.unpackb(socket.recv())
-        assert reply["kind"] == "error"
-        assert "." in reply["code"]
-        assert reply["message"]
+    with context.socket(zmq.DEALER) as socket:
+        socket.connect(service.lanes[lane])
+        for frame in hostile_frames():
+            socket.send(frame)
+            assert socket.poll(5_000), f"no reply to {frame[:40]!r}"
+            reply = msgpack.unpackb(socket.recv())
+            assert reply["kind"] == "error"
+            assert "." in reply["code"]
+            assert reply["message"]
     health = desk.ask(GetHealth, HealthReply)
     assert "crane" in health.rigs
 
@@ -119,10 +125,10 @@ def test_every_bad_frame_gets_an_error_reply(service: ServiceProcess, desk: Desk
 def test_an_oversized_frame_harms_nobody_else(service: ServiceProcess, desk: Desk, context: Context) -> None:
     put_crane(desk)
     for lane in ("action", "intake", "desk"):
-        socket = context.socket(zmq.DEALER)
-        socket.connect(service.lanes[lane])
-        socket.send(bytes(MAX_FRAME_BYTES + 1))
-        socket.poll(200)
+        with context.socket(zmq.DEALER) as socket:
+            socket.connect(service.lanes[lane])
+            socket.send(bytes(MAX_FRAME_BYTES + 1))
+            assert not socket.poll(200)
     assert [rig["rig"] for rig in desk.ask(ListRigs, RigsReply).rigs] == ["crane"]
 
 
@@ -134,7 +140,6 @@ def test_a_wrong_rig_description_is_named_and_not_kept(desk: Desk) -> None:
 
 
 def test_unknown_names_are_said_to_be_unknown(desk: Desk) -> None:
-    from nearhand.service.bus.desk_messages import EpisodeReply, GetEpisode, GetJob, GetVersion, JobReply, VersionReply
 
     for request, reply, fields in (
         (GetEpisode, EpisodeReply, {"episode": "nobody"}),
