@@ -33,18 +33,21 @@ Alter = Callable[[int, NDArray[np.float32]], NDArray[np.float32]]
 
 
 class Pace:
-    """Waits for the beginning of each control period, or not at all."""
+    """Waits for the beginning of each control period; not in real time, only when told that nothing was answered."""
 
     def __init__(self, period_s: float, *, real_time: bool) -> None:
         self._period_s = period_s
         self._real_time = real_time
         self._due_s = time.monotonic()
 
-    def wait(self) -> None:
+    def wait(self, *, answered: bool = True) -> None:
         """Return when the next period begins; a period that was missed altogether is not made up for."""
         if self._real_time:
             self._due_s = max(self._due_s + self._period_s, time.monotonic() - self._period_s)
             time.sleep(max(0.0, self._due_s - time.monotonic()))
+        elif not answered:
+            # A link that holds the machine by itself answers at once; the machine needs its time all the same.
+            time.sleep(self._period_s)
 
 
 def build_simulator(rig: Rig) -> Simulator:
@@ -273,36 +276,70 @@ def drive(
     Raises:
         ConfigError: the rig has no simulator, or it does not fit.
     """
-    simulator = build_simulator(rig)
-    limit = simulator.max_steps if max_steps is None else min(max_steps, simulator.max_steps)
+    run = _Run(rig, build_simulator(rig), faults, max_steps, paced, on_step)
     result = DriveResult()
-    run_steps = 0
-    for number in range(episodes):
-        episode = DrivenEpisode()
-        result.episodes.append(episode)
-        observation = simulator.reset(1, seed=seed + number)[0].astype(np.float32)
-        link = RigLink(rig, action_address)
-        try:
-            pace = Pace(rig.timing.period_s, real_time=paced)
-            while episode.steps < limit and not episode.over:
-                if faults.stop_after is not None and run_steps >= faults.stop_after:
-                    break
-                if faults.pause_at == run_steps:
-                    time.sleep(faults.pause_s)
-                reported = observation if faults.alter is None else faults.alter(run_steps, observation)
-                observation = _drive_step(simulator, link, reported, episode)
-                run_steps += 1
-                if on_step is not None:
-                    on_step(run_steps)
-                pace.wait()
-        finally:
-            link.close()
-        episode.outcomes = {name: float(values[0]) for name, values in simulator.outcomes().items()}
-        if on_episode is not None:
-            on_episode(number, episode)
-        if faults.stop_after is not None and run_steps >= faults.stop_after:
-            break
+    # The next episode's link connects while the present one drives: the watchdogs allow no long pause in between.
+    following = RigLink(rig, action_address)
+    try:
+        for number in range(episodes):
+            link, following = following, RigLink(rig, action_address)
+            try:
+                episode = run.episode(link, seed + number)
+            finally:
+                link.close()
+            result.episodes.append(episode)
+            if on_episode is not None:
+                on_episode(number, episode)
+            if run.has_stopped:
+                break
+    finally:
+        following.close()
     return result
+
+
+class _Run:
+    """Episodes driven one after the other; ``steps`` counts over all of them."""
+
+    def __init__(
+        self,
+        rig: Rig,
+        simulator: Simulator,
+        faults: Faults,
+        max_steps: int | None,
+        paced: bool,
+        on_step: Callable[[int], None] | None,
+    ) -> None:
+        self._period_s = rig.timing.period_s
+        self._simulator = simulator
+        self._faults = faults
+        self._limit = simulator.max_steps if max_steps is None else min(max_steps, simulator.max_steps)
+        self._paced = paced
+        self._on_step = on_step
+        self.steps = 0
+
+    @property
+    def has_stopped(self) -> bool:
+        """Whether the rig has stopped asking on purpose."""
+        return self._faults.stop_after is not None and self.steps >= self._faults.stop_after
+
+    def episode(self, link: RigLink, seed: int) -> DrivenEpisode:
+        """Drive one episode to its end, to the limit of steps, or until the rig stops asking."""
+        episode = DrivenEpisode()
+        observation = self._simulator.reset(1, seed=seed)[0].astype(np.float32)
+        pace = Pace(self._period_s, real_time=self._paced)
+        while episode.steps < self._limit and not episode.over and not self.has_stopped:
+            if self._faults.pause_at == self.steps:
+                time.sleep(self._faults.pause_s)
+            alter = self._faults.alter
+            reported = observation if alter is None else alter(self.steps, observation)
+            unanswered = episode.unanswered
+            observation = _drive_step(self._simulator, link, reported, episode)
+            self.steps += 1
+            if self._on_step is not None:
+                self._on_step(self.steps)
+            pace.wait(answered=episode.unanswered == unanswered)
+        episode.outcomes = {name: float(values[0]) for name, values in self._simulator.outcomes().items()}
+        return episode
 
 
 def _drive_step(
