@@ -58,9 +58,9 @@ def render(scene: Scene, *, width: int = WIDTH, height: int = HEIGHT) -> Rendera
     head = [_headline(scene)]
     jobs = [line for job in scene.jobs.values() for line in _job_lines(job)][:4]
     room = height - len(head) - len(jobs) - 1
-    events_room = min(len(scene.events), max(3, room // 4))
-    rigs = _rig_lines(scene, room - events_room)
-    events = [_event_line(event) for event in list(scene.events)[-events_room:]] if events_room else []
+    rigs = _rig_lines(scene, room - min(len(scene.events), max(3, room // 4)))
+    events_room = max(0, room - len(rigs))
+    events = [_event_line(event) for event in scene.events][-events_room:] if events_room else []
     lines = [*head, *rigs, *jobs, _rule("events", width), *events][:height]
     for line in lines:
         line.no_wrap, line.overflow = True, "ellipsis"
@@ -71,7 +71,18 @@ def render(scene: Scene, *, width: int = WIDTH, height: int = HEIGHT) -> Rendera
 def _line(*parts: str | tuple[str, str]) -> Text:
     from rich.text import Text
 
-    return Text.assemble(*parts)
+    return Text.assemble(
+        *((_clean(part), "") if isinstance(part, str) else (_clean(part[0]), part[1]) for part in parts)
+    )
+
+
+def _clean(text: str) -> str:
+    """Return the text without anything that could move the cursor: it may come from anywhere."""
+    return (
+        text
+        if text.isprintable()
+        else "".join(sign if sign.isprintable() else "\N{REPLACEMENT CHARACTER}" for sign in text)
+    )
 
 
 def _rule(title: str, width: int) -> Text:

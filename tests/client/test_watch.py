@@ -100,6 +100,14 @@ def test_a_trip_names_its_reasons(rig: Rig) -> None:
     assert "novel, latched" in text
 
 
+def test_no_text_from_outside_reaches_the_terminal_as_a_command() -> None:
+    scene = Scene()
+    scene.events.append(event(1, why="\x1b[2J\x1b]0;title\x07\r\nnext line", who="\x9b31m"))
+    shown = drawn(scene)[-1]
+    assert shown.isprintable()
+    assert "next line" in shown
+
+
 def test_a_silent_service_is_said_so(rig: Rig) -> None:
     first = drawn(Scene(states={"cart": state()}, uptime_s=5.0, silent_s=12.0))[0]
     assert "SILENT" in first
