@@ -7,6 +7,7 @@ from typing import Annotated
 
 import numpy as np
 from pydantic import Field, FiniteFloat, ValidationError
+from scipy.ndimage import uniform_filter1d
 
 from nearhand.service.errors import ConfigError
 from nearhand.service.rigs import Frozen, Positive, sentence
@@ -21,6 +22,7 @@ from nearhand.sim.shaping import zero_vibration
 
 #: Rope lengths are rounded to this before a gain is computed, so that few are.
 ROPE_STEP_M = 0.05
+SMOOTHING_S = 0.4
 
 
 class DesignedOptions(Frozen):
@@ -112,8 +114,13 @@ class DesignedExpert:
             position = position + (velocity + change / 2) * o.period_s
             velocity = velocity + change
             rows.append((position.copy(), velocity.copy()))
-        positions, velocities = zip(*rows, strict=True)
-        return np.array(positions), np.array(velocities)
+        positions, velocities = (self._smoothed(np.array(part)) for part in zip(*rows, strict=True))
+        return positions, velocities
+
+    def _smoothed(self, values: Array) -> Array:
+        """Return the running mean of the last SMOOTHING_S: it bounds the jerk, which a lagging drive cannot follow."""
+        size = max(1, round(SMOOTHING_S / self._o.period_s))
+        return np.asarray(uniform_filter1d(values, size, axis=0, mode="nearest", origin=(size - 1) // 2))
 
     def _shaped(self, position: Array, velocity: Array, rope: Array) -> tuple[Array, Array, Array]:
         """Return position, velocity and acceleration (steps, B) after the shaper."""

@@ -28,7 +28,7 @@ class CraneOptions(Frozen):
     rope_low_m: Positive = 3.0
     rope_high_m: Positive = 6.0
     distance_low_m: Positive = 7.0
-    distance_high_m: Positive = 10.5
+    distance_high_m: Positive = 10.0
     trolley_kg: Positive = 1000.0
     load_kg: Positive = 600.0
     friction: NotNegative = 40.0
