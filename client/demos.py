@@ -7,7 +7,6 @@ when the service has said that the whole episode is closed. Either side may die 
 from __future__ import annotations
 
 import contextlib
-import datetime
 import secrets
 import threading
 import time
@@ -140,8 +139,7 @@ class DemonstrationStream:
         """
         if self._stopping.is_set():
             raise ConfigError("the demonstration stream was closed; open a new one")
-        moment = datetime.datetime.now(datetime.UTC).strftime("%Y%m%dT%H%M%S")
-        episode = f"{self._rig.name[:30]}-{moment}-{secrets.token_hex(4)}"
+        episode = f"{self._rig.name[:40]}-{secrets.token_hex(5)}"
         n, m = len(self._rig.observations), len(self._rig.actions)
         try:
             head = OpenEpisode(
