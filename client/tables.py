@@ -73,20 +73,21 @@ def gate_table(reply: ReleaseReply) -> RenderableType:
     return Group(Text(f"{verdict}. {reply.message}".strip()), table) if reply.bounds else Text(verdict)
 
 
-def inspection_tables(result: Mapping[str, Any]) -> tuple[RenderableType, ...]:
-    """Return what was found of the episodes, and what to do about it."""
+def inspection_tables(result: Mapping[str, Any], *, most: int | None = None) -> tuple[RenderableType, ...]:
+    """Return what was found of the episodes (at most so many of them), and what to do about it."""
     from rich.table import Table
     from rich.text import Text
 
     table = Table(title=f"demonstrations of {result.get('rig', '?')}", title_justify="left")
     for name in ("episode", "operator", "use", "outcome"):
         table.add_column(name)
-    for name in ("s", "idle ends s", "saturated %", "gaps", "jitter %"):
+    for name in ("s", "idle s", "sat. %", "gaps", "jitter %"):
         table.add_column(name, justify="right")
-    for row in result.get("episodes", []):
+    rows = result.get("episodes", [])
+    for row in rows[:most]:
         saturated = max(row.get("saturation", {}).values(), default=0.0)
         table.add_row(
-            str(row.get("episode", ""))[:12],
+            str(row.get("episode", ""))[-8:],
             str(row.get("operator", "")),
             str(row.get("split", "")),
             str(row.get("outcome", "")),
@@ -96,6 +97,8 @@ def inspection_tables(result: Mapping[str, Any]) -> tuple[RenderableType, ...]:
             str(_count(row.get("gaps"))),
             "–" if row.get("jitter") is None else f"{100 * float(row['jitter']):.1f}",
         )
+    if most is not None and len(rows) > most:
+        table.caption, table.caption_justify = f"and {len(rows) - most} more", "left"
     return (table, *(Text(f"• {verdict['sentence']}") for verdict in result.get("verdicts", [])))
 
 

@@ -14,6 +14,7 @@ if TYPE_CHECKING:
     from rich.console import RenderableType
 
 STEPS = 10
+EPISODES_A_LINE = 4
 
 
 class Narrator:
@@ -81,12 +82,17 @@ class Narrator:
             yield lambda: progress.advance(task)
 
     def show_deliveries(self, title: str, rows: Sequence[dict[str, Any]]) -> None:
-        """Print sent and acknowledged samples, per episode."""
+        """Print sent and acknowledged samples of each episode, several to a line."""
         from rich.table import Table
 
-        table = Table(title=f"demonstrations by {title}", title_justify="left")
-        for name in ("episode", "outcome", "sent", "acknowledged", "state"):
-            table.add_column(name, justify="right" if name in ("sent", "acknowledged") else "left")
-        for row in rows:
-            table.add_row(*(str(row.get(name, "")) for name in ("episode", "outcome", "sent", "acknowledged", "state")))
+        table = Table(title=f"demonstrations by {title}: episode, acknowledged / sent", title_justify="left")
+        for _ in range(EPISODES_A_LINE):
+            table.add_column("", no_wrap=True)
+        cells = [
+            f"{str(row['episode'])[-8:]} {row['acknowledged']}/{row['sent']}{'' if row['state'] == 'closed' else ' !'}"
+            for row in rows
+        ]
+        for start in range(0, len(cells), EPISODES_A_LINE):
+            table.add_row(*cells[start : start + EPISODES_A_LINE])
+        table.show_header = False
         self.show(table)

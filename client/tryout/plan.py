@@ -43,7 +43,7 @@ def make_plan(rig: Rig, rig_source: str, *, quick: bool) -> Plan:
     is one, gives some more, which are inspected beside them.
     """
     expert = rig.expert or next(iter(rig.experts))
-    demonstrations = {expert: 48 if quick else 60}
+    demonstrations = {expert: 72 if quick else 96}
     if "operator" in rig.experts and expert != "operator":
         demonstrations["operator"] = 3 if quick else 6
     return Plan(

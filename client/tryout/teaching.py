@@ -47,7 +47,7 @@ def inspect(desk: Desk, narrator: Narrator, plan: Plan) -> None:
     """Inspect all demonstrations and show what was found."""
     with JobBar("inspect") as bar:
         result = wait_job(desk, start_job(desk, "inspect", plan.rig.name, WHO, {}), show=bar.show).result or {}
-    narrator.show(*inspection_tables(result))
+    narrator.show(*inspection_tables(result, most=8))
     inspected = len(result.get("episodes", []))
     expected = sum(plan.demonstrations.values())
     narrator.check(inspected == expected, f"{inspected} of {expected} episodes inspected")
