@@ -11,22 +11,20 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from nearhand.service.bus.action_messages import Mode, Reason
-from nearhand.service.envelope.chain import limit
+from nearhand.service.bus.action_messages import Mode, Reason, reason_names
+from nearhand.service.envelope.braking import Guards
+from nearhand.service.envelope.chain import Limited, limit
 from nearhand.service.envelope.fallback import FallbackAction
 from nearhand.service.envelope.limits import Float32, Limits
 from nearhand.service.envelope.novelty import NoveltyScore
 from nearhand.service.envelope.watchdog import Watchdog
 from nearhand.service.errors import ConflictError, PolicyFormatError
 from nearhand.service.policy.format import PolicyFile
+from nearhand.service.policy.network import Policy
 from nearhand.service.rigs import Rig
 
 #: As far back as any policy can look.
 HISTORY = 17
-#: Reasons that say something of one query only; the others stand as long as the latch.
-PASSING = Reason.CLIPPED | Reason.SLEWED | Reason.BRAKED | Reason.OLD
-#: Float32 rounding of a limit is no intervention.
-VISIBLE = 1e-6
 
 
 @dataclass(frozen=True, slots=True)
@@ -61,9 +59,10 @@ class Governor:
         self._limits = Limits.of(rig)
         self._n, self._m = len(rig.observations), len(rig.actions)
         self._watchdog = Watchdog(rig.timing.deadline_s)
-        self._fallback = FallbackAction(
-            self._limits, kind=rig.fallback.kind, ramp_per_s=rig.fallback.ramp_per_s, hold_s=rig.fallback.hold_s
-        )
+        self._guards = Guards(self._limits)
+        self._fallback = FallbackAction(self._limits)
+        self._barely_low = self._limits.low - self._limits.rounding
+        self._barely_high = self._limits.high + self._limits.rounding
         self._file: PolicyFile | None = None
         self._novelty: NoveltyScore | None = None
         self._window: Float32 = np.zeros(0, dtype=np.float32)
@@ -136,7 +135,7 @@ class Governor:
             self.mode, self.reasons = "latched", Reason.LATCHED | Reason.OPERATOR
 
     def arm(self) -> None:
-        """Clear the latch.
+        """Clear the latch. An armed rig stays as it is: its watchdog keeps counting.
 
         Raises:
             ConflictError: no version is in service.
@@ -145,6 +144,8 @@ class Governor:
             raise ConflictError(
                 f"rig {self.rig.name} has no version in service; release one first", code="conflict.empty"
             )
+        if self.mode == "armed":
+            return
         self.mode, self.reasons = "armed", Reason.NONE
         self._low_values.clear()
         self._watchdog.pause()
@@ -154,7 +155,7 @@ class Governor:
         """Stop for a reason; the fallback acts from the next query on. An empty rig stays empty."""
         if self.mode == "armed":
             self.counts["trips"] += 1
-            self.trips.append(str(reason.name).lower())
+            self.trips.append(", ".join(reason_names(int(reason))))
         if self.mode != "empty":
             self.mode = "latched"
         self.reasons |= Reason.LATCHED | reason
@@ -193,51 +194,59 @@ class Governor:
             return Decision(self._previous, self.mode, self.version, int(self.reasons | Reason.OLD), self.novelty)
         self._last_seq = seq
         self.tick(now_ns)
-        if self._watchdog.received(sent_ns, now_ns) and self.mode == "armed":
-            self.latch(Reason.LATE)
-        if applied is not None and self._is_inside(applied):
-            self._previous = applied.astype(np.float32)
+        flags = Reason.NONE
+        if self._watchdog.received(sent_ns, now_ns):
+            flags |= Reason.LATE
+        if applied is not None:
+            self._take_over(applied)
         seen = observation.shape == (self._n,) and bool(np.isfinite(observation).all())
         if seen:
-            self._remember(observation)
-        elif self.mode == "armed":
-            self.latch(Reason.FORM)
-        flags = Reason.NONE
-        proposed = self._propose() if seen and self._file is not None else None
+            self._remember(observation, now_ns)
+        else:
+            flags |= Reason.FORM
+        self._guards.note(self._previous)
+        if flags and self.mode == "armed":
+            self.latch(flags)
+        proposed = None
+        self.novelty = 1.0
+        if seen and self._file is not None:
+            with np.errstate(over="ignore", invalid="ignore"):
+                proposed = self._propose(self._file.policy)
         if proposed is not None and self.mode == "armed":
-            limited = limit(self._limits, proposed, self._previous, observation)
-            flags = self._flags(limited.clipped, limited.slewed, limited.braked)
+            limited = limit(self._limits, proposed, self._previous, observation, self._guards)
+            flags |= self._flags(limited)
             action = limited.action
         else:
-            action = self._fallback.act(self._previous, now_ns, seen=seen)
+            action = self._fallback.act(self._previous, now_ns)
             self.counts["fallback"] += 1
         self._previous = action
         return Decision(action, self.mode, self.version, int(self.reasons | flags), self.novelty)
 
-    def _is_inside(self, applied: Float32) -> bool:
-        return (
-            applied.shape == (self._m,)
-            and bool(np.isfinite(applied).all())
-            and bool((applied >= self._limits.low - VISIBLE).all() and (applied <= self._limits.high + VISIBLE).all())
-        )
+    def _take_over(self, applied: Float32) -> None:
+        """Take ``applied`` for the action in force, if it is one."""
+        if applied.shape == (self._m,) and bool(
+            ((applied >= self._barely_low) & (applied <= self._barely_high)).all()  # NaN is neither
+        ):
+            self._previous = np.minimum(np.maximum(applied, self._limits.low), self._limits.high)
+        else:
+            self.counts["applied_unusable"] += 1
 
-    def _remember(self, observation: Float32) -> None:
+    def _remember(self, observation: Float32, now_ns: int) -> None:
         """Shift the history by one: row 0 is the present observation, and the action that led to it."""
         if self._fresh_history:
             self._observed[:] = observation
             self._acted[:] = self._previous
+            self._guards.restart(self._previous)
             self._fresh_history = False
         else:
             self._observed[1:] = self._observed[:-1]
             self._observed[0] = observation
             self._acted[1:] = self._acted[:-1]
             self._acted[0] = self._previous
-        self._fallback.see(observation)
+        self._fallback.see(observation, now_ns)
 
-    def _propose(self) -> Float32 | None:
+    def _propose(self, policy: Policy) -> Float32 | None:
         """Return the policy's action (m,) if it is finite; look at the novelty on the way."""
-        assert self._file is not None
-        policy = self._file.policy
         split = self._n * (1 + policy.past_observations)
         rows = self._observed[: 1 + policy.past_observations]
         np.divide(
@@ -247,8 +256,7 @@ class Governor:
             done = self._acted[: policy.past_actions]
             self._window[split:] = ((done - policy.action_middle) / policy.action_half).reshape(-1)
         self._judge_novelty()
-        with np.errstate(over="ignore", invalid="ignore"):
-            action = policy.action(self._window)
+        action = policy.action(self._window)
         if np.isfinite(action).all():
             return action
         if self.mode == "armed":
@@ -257,7 +265,6 @@ class Governor:
 
     def _judge_novelty(self) -> None:
         if self._novelty is None or self._novelty.smallest_epsilon >= 1.0:
-            self.novelty = 1.0
             return
         self.novelty = self._novelty.p_value(self._window)
         self._low_values.append(self.novelty <= self.epsilon)
@@ -266,11 +273,14 @@ class Governor:
             if self._gate_trips and self.mode == "armed":
                 self.latch(Reason.NOVEL)
 
-    def _flags(self, clipped: bool, slewed: bool, braked: bool) -> Reason:
+    def _flags(self, limited: Limited) -> Reason:
         flags = Reason.NONE
-        for changed, reason in ((clipped, Reason.CLIPPED), (slewed, Reason.SLEWED), (braked, Reason.BRAKED)):
-            if changed:
-                flags |= reason
-                self.counts[str(reason.name).lower()] += 1
-        self.counts["interventions"] += bool(flags)
+        if limited.clipped or limited.slewed or limited.braked:
+            for changed, reason in (
+                (limited.clipped, Reason.CLIPPED), (limited.slewed, Reason.SLEWED), (limited.braked, Reason.BRAKED),
+            ):  # fmt: skip
+                if changed:
+                    flags |= reason
+                    self.counts[str(reason.name).lower()] += 1
+            self.counts["interventions"] += 1
         return flags

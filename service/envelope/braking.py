@@ -1,65 +1,258 @@
 """Braking: no action may leave the set from which the axis can still stop before its limit.
 
-With h the time until braking can begin (lease + drive reaction + slew ramp) and d the deceleration:
+The worst that may follow an action is looked at, towards either limit:
 
-* axis driven by speed u:         u·h + u²/(2d) ≤ D                    ⇔ u ≤ −d·h + √(d²h² + 2dD)
-* axis driven by acceleration a:  v·h + a·h²/2 + (v + a·h)²/(2d) ≤ D   a quadratic in a
+1. for the drive's reaction and one period of transit, the axis may still follow any of the actions of that past;
+2. the action is held for a lease, for one more period until its end is noticed, and for as long as the fallback holds;
+3. it then falls as fast as slew and the fallback's ramp let it, down to full braking;
+4. the axis brakes to standstill.
 
-D is the distance left, v the speed towards the limit. Source: stopping distance d = v·t + v²/(2a) of elementary
-kinematics; derived here for held actions.
+How far that carries must not exceed the distance left. Whatever action keeps this now, in the next period the action
+that slew lets it be lowered to keeps it again: its course is nowhere above the one looked at. From inside the set,
+braking and slew therefore never conflict; from outside, slew wins and braking moves the action as fast as slew lets it.
+
+For an axis driven by speed, without past, this is the soft limit u ≤ −d·h + √(d²h² + 2·d·D).
+Source: stopping distance v·t + v²/(2d) of elementary kinematics; the invariance is derived here, and tested with an
+exactly sampled double integrator.
 """
 
 from __future__ import annotations
 
 import math
+from collections import deque
+from collections.abc import Sequence
+from dataclasses import dataclass
 
-from nearhand.service.envelope.limits import Axis
+import numpy as np
+from numpy.typing import NDArray
 
+from nearhand.service.envelope.limits import Axis, Float32, Limits
 
-def highest_speed(distance: float, deceleration: float, delay_s: float) -> float:
-    """Return the highest speed from which the axis stops within ``distance`` after ``delay_s``."""
-    if distance <= 0.0:
-        return 0.0
-    swing = deceleration * delay_s
-    return -swing + math.sqrt(swing * swing + 2.0 * deceleration * distance)
-
-
-def highest_acceleration(distance: float, speed: float, deceleration: float, delay_s: float) -> float:
-    """Return the highest acceleration that may be held for ``delay_s``; ``-deceleration`` when it must brake fully."""
-    a2 = delay_s * delay_s / (2.0 * deceleration)
-    a1 = delay_s * delay_s / 2.0 + speed * delay_s / deceleration
-    a0 = speed * delay_s + speed * abs(speed) / (2.0 * deceleration) - distance
-    inside = a1 * a1 - 4.0 * a2 * a0
-    if inside < 0.0:
-        return -deceleration
-    root = (-a1 + math.sqrt(inside)) / (2.0 * a2)
-    return max(root, -deceleration)
+#: Bisections for the highest action; the result errs towards the limit's safe side by range / 2**HALVINGS.
+HALVINGS = 20
+#: Easing out begins this many reaction times before standstill; a loop with that much delay does not swing about it.
+EASING = 3.0
 
 
-def allowed(
-    axis: Axis, position: float, velocity: float, slew_per_s: float, strongest: float, lease_s: float
-) -> tuple[float, float]:
-    """Return the lowest and the highest action that the axis may be given now.
-
-    Args:
-        position, velocity: as observed, in the axis' units.
-        slew_per_s: fastest change of the action.
-        strongest: largest magnitude of the action.
-        lease_s: how long an action may be held without a new one.
-    """
-    delay_s = lease_s + axis.reaction_s
-    if axis.accelerates:
-        delay_s += (strongest + axis.deceleration) / slew_per_s
-        up = highest_acceleration(axis.high - position, velocity, axis.deceleration, delay_s)
-        down = -highest_acceleration(position - axis.low, -velocity, axis.deceleration, delay_s)
-    else:
-        up = highest_speed(axis.high - position, axis.deceleration, delay_s)
-        down = -highest_speed(position - axis.low, axis.deceleration, delay_s)
-    return (down, up) if down <= up else ((down + up) / 2, (down + up) / 2)
+def easing_s(axis: Axis, period_s: float) -> float:
+    """Return the time constant with which the last of an accelerated axis' speed is taken away."""
+    return EASING * (period_s + axis.reaction_s)
 
 
 def towards_standstill(axis: Axis, velocity: float, period_s: float) -> float:
-    """Return the action that brings the axis to standstill: deceleration, eased so as not to reverse."""
+    """Return the action that brings the axis to standstill: full braking, eased out so that it does not reverse.
+
+    Args:
+        velocity: in the axis' units per second.
+    """
     if not axis.accelerates:
         return 0.0
-    return -math.copysign(min(axis.deceleration, abs(velocity) / (2.0 * period_s)), velocity)
+    return -math.copysign(min(axis.deceleration, abs(velocity) / easing_s(axis, period_s)), velocity)
+
+
+@dataclass(frozen=True, slots=True)
+class Brake:
+    """Braking towards one limit; speeds and accelerations count positive towards it.
+
+    Attributes:
+        accelerates: whether the action is an acceleration, else a speed.
+        strongest: the highest action there is.
+        deceleration: what the axis brakes with.
+        ramp_per_s: how fast the action can be lowered.
+        hold_s: how long an action may be held without a new one.
+        period_s: length of each pending action.
+        easing_s: see :func:`easing_s`; 0 for none.
+    """
+
+    accelerates: bool
+    strongest: float
+    deceleration: float
+    ramp_per_s: float
+    hold_s: float
+    period_s: float
+    easing_s: float
+
+    @property
+    def margin(self) -> float:
+        """How much farther than v²/(2d) easing out carries the axis, at most: d·τ²/2."""
+        return self.deceleration * self.easing_s * self.easing_s / 2.0
+
+    def furthest(self, speed: float, action: float, pending: Sequence[float] = ()) -> float:
+        """Return how far the axis may come from here.
+
+        Args:
+            speed: towards the limit.
+            action: the action considered.
+            pending: upper bounds, period by period, of what the drive may still follow before the action.
+        """
+        if self.accelerates:
+            return self._furthest_accelerated(speed, action, pending)
+        return self._furthest_at_speed(speed, action, pending)
+
+    def _furthest_accelerated(self, speed: float, action: float, pending: Sequence[float]) -> float:
+        # The accelerations never rise along the way, so the speed changes from towards to away at most once.
+        place, d = 0.0, self.deceleration
+        for acceleration, time_s in (*((max(one, action), self.period_s) for one in pending), (action, self.hold_s)):
+            after = speed + acceleration * time_s
+            if speed > 0.0 >= after:
+                return place - speed * speed / (2.0 * acceleration)
+            place += (speed + after) / 2.0 * time_s
+            speed = after
+        if action > -d:
+            time_s = (action + d) / self.ramp_per_s
+            after = speed + (action - d) / 2.0 * time_s
+            if after <= 0.0:
+                inside = action * action + 2.0 * self.ramp_per_s * speed
+                turn_s = (action + math.sqrt(inside)) / self.ramp_per_s if inside > 0.0 else 0.0
+                turn_s = max(turn_s, 0.0)
+                return max(place + turn_s * (speed + turn_s * (action / 2.0 - self.ramp_per_s * turn_s / 6.0)), 0.0)
+            place += time_s * (speed + time_s * (action / 2.0 - (action + d) / 6.0))
+            speed = after
+        return max(place + (speed * speed / (2.0 * d) if speed > 0.0 else 0.0), 0.0)
+
+    def _furthest_at_speed(self, speed: float, action: float, pending: Sequence[float]) -> float:
+        place, d = 0.0, min(self.deceleration, self.ramp_per_s)
+        for command in pending:
+            place += max(command, action, speed, 0.0) * self.period_s
+            speed = max(command, action, speed - d * self.period_s)
+        if speed > action:
+            slowing_s = (speed - action) / d
+            if slowing_s >= self.hold_s or action <= 0.0:
+                return place + max(speed, 0.0) ** 2 / (2.0 * d)
+            place += (speed + action) / 2.0 * slowing_s
+            return place + action * (self.hold_s - slowing_s) + action * action / (2.0 * d)
+        return place + max(action, 0.0) * self.hold_s + max(action, 0.0) ** 2 / (2.0 * d)
+
+    def highest(self, room: float, speed: float, wanted: float, floor: float, pending: Sequence[float] = ()) -> float:
+        """Return ``wanted``, lowered as far as the room needs it, but not below ``floor``.
+
+        Args:
+            room: distance left to the limit.
+            floor: what brings the axis to standstill.
+        """
+        room -= self.margin
+        if wanted <= floor or self._is_far(room, speed, len(pending)):
+            return wanted
+        if self.furthest(speed, wanted, pending) <= room:
+            return wanted
+        if not self.furthest(speed, floor, pending) <= room:
+            return floor
+        good, bad = floor, wanted
+        for _ in range(HALVINGS):
+            middle = (good + bad) / 2.0
+            if self.furthest(speed, middle, pending) <= room:
+                good = middle
+            else:
+                bad = middle
+        return good
+
+    def _is_far(self, room: float, speed: float, periods: int) -> bool:
+        """Tell, quickly, whether even the highest action all along would not use up the room."""
+        time_s = self.hold_s + periods * self.period_s
+        if not self.accelerates:
+            d = min(self.deceleration, self.ramp_per_s)
+            top = max(self.strongest, speed, 0.0)
+            return top * (time_s + top / (2.0 * d)) <= room
+        time_s += (self.strongest + self.deceleration) / self.ramp_per_s
+        top = max(speed, 0.0) + max(self.strongest, 0.0) * time_s
+        return top * (time_s + top / (2.0 * self.deceleration)) <= room
+
+
+class AxisGuard:
+    """Keeps one axis' action inside the braking set; remembers the actions that the drive may still follow.
+
+    Args:
+        axis: the axis.
+        limits: of the rig that it belongs to.
+    """
+
+    def __init__(self, axis: Axis, limits: Limits) -> None:
+        self.axis = axis
+        self._period_s = limits.period_s
+        low, high = float(limits.low[axis.action]), float(limits.high[axis.action])
+        step = limits.slew_step if limits.at_once else limits.ramp_step
+        ramp_per_s = max(float(step[axis.action]) / limits.period_s, 1e-9)
+        hold_s = limits.lease_s + limits.period_s + limits.hold_s
+        eased = easing_s(axis, limits.period_s) if axis.accelerates else 0.0
+
+        def brake(strongest: float, weakest: float) -> Brake:
+            reach = min(axis.deceleration, max(-weakest, 1e-9)) if axis.accelerates else axis.deceleration
+            return Brake(axis.accelerates, strongest, reach, ramp_per_s, hold_s, limits.period_s, eased)
+
+        self._up, self._down = brake(high, low), brake(-low, -high)
+        self._recent: deque[float] = deque(maxlen=1 + math.ceil(axis.reaction_s / limits.period_s - 1e-9))
+
+    def restart(self, action: float) -> None:
+        """Forget the past: the drive has long been following ``action``."""
+        self._recent.extend([action] * (self._recent.maxlen or 1))
+
+    def note(self, action: float) -> None:
+        """Note the action that was in force for the last period."""
+        self._recent.appendleft(action)
+
+    def keep(self, position: float, velocity: float, wanted: float) -> float:
+        """Return ``wanted``, or the nearest action from which the axis can still stop before both limits.
+
+        Args:
+            position, velocity: as observed, in the axis' units.
+        """
+        still = towards_standstill(self.axis, velocity, self._period_s)
+        up_room, down_room = self.axis.high - position, position - self.axis.low
+        up_pending, down_pending = _bounds(self._recent), _bounds([-one for one in self._recent])
+        lowered = self._up.highest(up_room, velocity, wanted, still, up_pending)
+        raised = -self._down.highest(down_room, -velocity, -lowered, -still, down_pending)
+        if raised == lowered:
+            return lowered
+        # Both limits are near: what the one asks for, the other must allow.
+        if self._up.highest(up_room, velocity, raised, still, up_pending) < raised:
+            return still
+        return raised
+
+
+def _bounds(recent: Sequence[float] | deque[float]) -> list[float]:
+    """Return, period by period, the highest of the past actions that a late drive may still follow.
+
+    Args:
+        recent: actions of the past periods, newest first.
+    """
+    highest: list[float] = []
+    top = -math.inf
+    for one in recent:
+        top = max(top, one)
+        highest.append(top)
+    highest.reverse()
+    return highest
+
+
+class Guards:
+    """The guards of all of a rig's axes."""
+
+    def __init__(self, limits: Limits) -> None:
+        self._guards = tuple(AxisGuard(axis, limits) for axis in limits.axes)
+        self.restart(limits.rest)
+
+    def restart(self, action: Float32) -> None:
+        """Forget the past: the machine has long been following ``action`` (m,)."""
+        for guard in self._guards:
+            guard.restart(float(action[guard.axis.action]))
+
+    def note(self, action: Float32) -> None:
+        """Note the action (m,) that was in force for the last period."""
+        for guard in self._guards:
+            guard.note(float(action[guard.axis.action]))
+
+    def keep(self, action: Float32, observation: NDArray[np.floating]) -> bool:
+        """Change ``action`` (m,) in place where braking asks for it; tell whether it did.
+
+        Args:
+            observation: (n,) finite.
+        """
+        changed = False
+        for guard in self._guards:
+            axis = guard.axis
+            wanted = float(action[axis.action])
+            kept = guard.keep(float(observation[axis.position]), float(observation[axis.velocity]), wanted)
+            if kept != wanted:
+                action[axis.action] = kept
+                changed = True
+        return changed

@@ -6,8 +6,6 @@ is an acceleration, rest is standstill, not the action zero: the fallback decele
 
 from __future__ import annotations
 
-import math
-
 import numpy as np
 from numpy.typing import NDArray
 
@@ -15,32 +13,30 @@ from nearhand.service.envelope.braking import towards_standstill
 from nearhand.service.envelope.chain import slew
 from nearhand.service.envelope.limits import Float32, Limits
 
+#: A speed is estimated forward over at most this long at once; a longer silence tells nothing of what was applied.
+LONGEST_ESTIMATE_S = 1.0
+
 
 class FallbackAction:
     """The fallback of one rig, with its memory of time and speeds.
 
-    ``rest`` commands the rest action at once, whatever the slew limit. ``ramp`` goes there at ``ramp_per_s`` of the
-    range per second, never faster than slew. ``hold`` keeps the last action for ``hold_s``, then ramps.
+    ``rest`` commands the rest action at once: the slew limit does not apply to it, the range does. ``ramp`` goes there
+    at the fallback's rate, never faster than slew, one step per call: call it once per control period. ``hold`` keeps
+    the last action for a bounded time, then ramps. Braking axes are brought to standstill in place of ``rest``.
 
     Args:
         limits: the rig's limits.
-        kind: ``rest``, ``ramp`` or ``hold``.
-        ramp_per_s: fraction of each channel's range per second.
-        hold_s: for ``hold``.
     """
 
-    def __init__(self, limits: Limits, *, kind: str, ramp_per_s: float, hold_s: float) -> None:
+    def __init__(self, limits: Limits) -> None:
         self._limits = limits
-        self._kind = kind
-        self._hold_s = hold_s if kind == "hold" else 0.0
-        ramp = (limits.high - limits.low) * np.float32(ramp_per_s * limits.period_s)
-        self._step = np.asarray(np.minimum(ramp, limits.slew_step), dtype=np.float32)
         self._speeds = [0.0] * len(limits.axes)
+        self._speeds_ns: int | None = None
         self._since_ns: int | None = None
-        self._last_ns = 0
 
-    def see(self, observation: NDArray[np.floating]) -> None:
+    def see(self, observation: NDArray[np.floating], now_ns: int) -> None:
         """Note the axes' speeds from a finite observation (n,)."""
+        self._speeds_ns = now_ns
         for index, axis in enumerate(self._limits.axes):
             self._speeds[index] = float(observation[axis.velocity])
 
@@ -48,38 +44,34 @@ class FallbackAction:
         """The fallback no longer acts; the next time it begins anew."""
         self._since_ns = None
 
-    def act(self, previous: Float32, now_ns: int, *, seen: bool) -> Float32:
+    def act(self, previous: Float32, now_ns: int) -> Float32:
         """Return the next action (m,).
 
+        The axes' speeds are those last seen, estimated forward as if ``previous`` had been in force since. Without
+        new observations, what a late drive still had to follow at the last one stays unknown: a residual speed of at
+        most its acceleration times its delay remains.
+
         Args:
-            previous: (m,) the action in force.
+            previous: (m,) the action in force, inside the range.
             now_ns: monotonic time.
-            seen: the speeds are fresh; otherwise they are estimated forward from the actions since.
         """
         if self._since_ns is None:
-            self._since_ns = self._last_ns = now_ns
-        elapsed_s = (now_ns - self._since_ns) * 1e-9
-        passed_s = min(max((now_ns - self._last_ns) * 1e-9, 0.0), 1.0)
-        self._last_ns = now_ns
-        if not seen:
-            self._estimate(previous, passed_s)
-        if elapsed_s < self._hold_s:
+            self._since_ns = now_ns
+        self._estimate(previous, now_ns)
+        if (now_ns - self._since_ns) * 1e-9 < self._limits.hold_s:
             return previous.copy()
         target = self._limits.rest.copy()
         for speed, axis in zip(self._speeds, self._limits.axes, strict=True):
-            if axis.accelerates:
-                target[axis.action] = towards_standstill(axis, speed, self._limits.period_s)
-        target = np.minimum(np.maximum(target, self._limits.low), self._limits.high)
-        if self._kind == "rest":
-            return target
-        stepped = np.minimum(np.maximum(target, previous - self._step), previous + self._step)
-        return slew(self._limits, np.asarray(stepped, dtype=np.float32), previous)
+            target[axis.action] = towards_standstill(axis, speed, self._limits.period_s)
+        if self._limits.at_once:
+            return np.minimum(np.maximum(target, self._limits.low), self._limits.high)
+        return slew(self._limits, target, previous, self._limits.ramp_step)
 
-    def _estimate(self, previous: Float32, passed_s: float) -> None:
-        for index, axis in enumerate(self._limits.axes):
-            if axis.accelerates:
-                before = self._speeds[index]
-                after = before + float(previous[axis.action]) * passed_s
-                # Braking must not be estimated into motion the other way.
-                crossed = before != 0.0 and math.copysign(1.0, after) != math.copysign(1.0, before)
-                self._speeds[index] = 0.0 if crossed else after
+    def _estimate(self, previous: Float32, now_ns: int) -> None:
+        """Advance the accelerated axes' speeds to now."""
+        if self._speeds_ns is not None and now_ns > self._speeds_ns:
+            passed_s = min((now_ns - self._speeds_ns) * 1e-9, LONGEST_ESTIMATE_S)
+            for index, axis in enumerate(self._limits.axes):
+                if axis.accelerates:
+                    self._speeds[index] += float(previous[axis.action]) * passed_s
+            self._speeds_ns = now_ns

@@ -10,6 +10,10 @@ from numpy.typing import NDArray
 from nearhand.service.rigs import Rig
 
 Float32 = NDArray[np.float32]
+#: Limits beyond this count as this much, so that sums of them stay finite in float32.
+LARGEST = 1e37
+#: A change by less than this fraction of the range is rounding, not an intervention.
+ROUNDING = 1e-6
 
 
 @dataclass(frozen=True, slots=True)
@@ -28,12 +32,28 @@ class Axis:
 
 @dataclass(frozen=True, slots=True)
 class Limits:
-    """Per action channel: range, rest, greatest change per control period; and the braking axes."""
+    """What a rig's actions keep within.
+
+    Attributes:
+        low, high: (m,) range per action channel; float32 values that do not lie outside the declared ones.
+        rest: (m,) the action at rest.
+        rounding: (m,) what is no change worth telling.
+        slew_step: (m,) greatest change per control period.
+        ramp_step: (m,) the fallback's change per control period, at most ``slew_step``.
+        at_once: the fallback commands rest at once, whatever the slew.
+        hold_s: how long the fallback first holds the last action.
+        period_s, lease_s: see :class:`nearhand.service.rigs.Timing`.
+        axes: the braking axes.
+    """
 
     low: Float32
     high: Float32
     rest: Float32
+    rounding: Float32
     slew_step: Float32
+    ramp_step: Float32
+    at_once: bool
+    hold_s: float
     period_s: float
     lease_s: float
     axes: tuple[Axis, ...]
@@ -44,8 +64,9 @@ class Limits:
         observed = [channel.name for channel in rig.observations]
         acted = [channel.name for channel in rig.actions]
 
-        def column(name: str) -> Float32:
-            return np.array([getattr(channel, name) for channel in rig.actions], dtype=np.float32)
+        def column(name: str) -> NDArray[np.float64]:
+            values = np.array([getattr(channel, name) for channel in rig.actions], dtype=np.float64)
+            return np.asarray(np.clip(values, -LARGEST, LARGEST), dtype=np.float64)
 
         axes = tuple(
             Axis(
@@ -54,8 +75,31 @@ class Limits:
             )
             for axis in rig.braking
         )  # fmt: skip
-        period_s = rig.timing.period_s
+        period_s, fallback = rig.timing.period_s, rig.fallback
+        low, high = _inwards(column("low"), up=True), _inwards(column("high"), up=False)
+        # Two limits within one float32 step of each other leave no value between them: the lower one then serves.
+        high = np.maximum(low, high)
+        reach = np.minimum(column("high") - column("low"), LARGEST)
+        slew_step = _inwards(np.minimum(column("slew_per_s") * period_s, LARGEST), up=False)
+        ramp_step = _inwards(np.minimum(reach * min(fallback.ramp_per_s * period_s, 1.0), slew_step), up=False)
         return cls(
-            column("low"), column("high"), column("rest"),
-            np.asarray(column("slew_per_s") * period_s, dtype=np.float32), period_s, rig.timing.lease_s, axes,
-        )  # fmt: skip
+            low=low,
+            high=high,
+            rest=np.clip(column("rest").astype(np.float32), low, high),
+            rounding=np.asarray(ROUNDING * reach, dtype=np.float32),
+            slew_step=slew_step,
+            ramp_step=ramp_step,
+            at_once=fallback.kind == "rest",
+            hold_s=fallback.hold_s if fallback.kind == "hold" else 0.0,
+            period_s=period_s,
+            lease_s=rig.timing.lease_s,
+            axes=axes,
+        )
+
+
+def _inwards(values: NDArray[np.float64], *, up: bool) -> Float32:
+    """Round to float32 towards the inside: up for lower limits, down for upper ones."""
+    nearest = values.astype(np.float32)
+    outside = nearest < values if up else nearest > values
+    towards = np.float32(np.inf if up else -np.inf)
+    return np.where(outside, np.nextafter(nearest, towards), nearest).astype(np.float32)

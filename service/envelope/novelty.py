@@ -8,6 +8,8 @@ Source: Vovk, Gammerman & Shafer, Algorithmic Learning in a Random World, 2005 (
 
 from __future__ import annotations
 
+import math
+from bisect import bisect_left
 from collections.abc import Sequence
 
 import numpy as np
@@ -27,8 +29,18 @@ def calibrate(reference: Float32, episodes: Sequence[Float32]) -> dict[str, Floa
         episodes: per calibration episode its windows (T, d).
 
     Returns:
-        ``centre`` (d,), ``whitening`` (d, d), ``maxima`` (episodes,) sorted.
+        ``centre`` (d,), ``whitening`` (d, d), ``maxima`` (episodes,) sorted. A further score would bring its own
+        tensors under further names.
+
+    Raises:
+        ValueError: there are no reference windows, or a value is not finite.
     """
+    if reference.ndim != 2 or not len(reference):
+        raise ValueError(f"reference windows have shape {reference.shape}; expected (N, d) with N ≥ 1")
+    episodes = [windows for windows in episodes if len(windows)]
+    for windows in (reference, *episodes):
+        if not np.isfinite(windows).all():
+            raise ValueError("windows of the demonstrations must be finite")
     centre = reference.mean(axis=0, dtype=np.float64)
     spread = np.maximum(reference.std(axis=0, dtype=np.float64), SMALLEST_SD)
     scaled = (reference - centre) / spread
@@ -48,6 +60,13 @@ def calibrate(reference: Float32, episodes: Sequence[Float32]) -> dict[str, Floa
 class NoveltyScore:
     """The calibrated score, ready to serve; without calibration episodes every p-value is 1.
 
+    Args:
+        tensors: as :func:`calibrate` returns them.
+
+    Raises:
+        KeyError: a tensor is missing.
+        ValueError: the shapes do not fit each other.
+
     Attributes:
         d: width of a window.
         smallest_epsilon: 1/(n+1), the finest false-alarm rate that n calibration episodes can promise.
@@ -56,15 +75,19 @@ class NoveltyScore:
     def __init__(self, tensors: dict[str, Float32]) -> None:
         self._centre = tensors["centre"]
         self._whitening = tensors["whitening"]
-        self._maxima = tensors["maxima"]
-        self.d = int(self._centre.shape[0])
+        self._maxima = sorted(float(value) for value in tensors["maxima"])
+        self.d = int(self._centre.size)
+        if self._centre.ndim != 1 or self._whitening.shape != (self.d, self.d):
+            raise ValueError(f"centre {self._centre.shape} and whitening {self._whitening.shape} do not fit")
         self.smallest_epsilon = 1.0 / (len(self._maxima) + 1)
 
     def score(self, window: Float32) -> float:
         """Return the distance of a window (d,); infinite if it is not finite."""
-        gap = self._whitening @ (window - self._centre)
-        squared = float(gap @ gap)
-        return float(np.sqrt(squared)) if np.isfinite(squared) else float("inf")
+        with np.errstate(over="ignore", invalid="ignore"):
+            gap = self._whitening @ (window - self._centre)
+            squared = float(gap @ gap)
+        # Rounded as the maxima are, so that equals compare as equals.
+        return float(np.float32(math.sqrt(squared))) if math.isfinite(squared) else math.inf
 
     def p_value(self, window: Float32) -> float:
         """Return (1 + number of calibration episodes whose maximum is at least the score) / (n + 1)."""
@@ -73,4 +96,4 @@ class NoveltyScore:
     def p_of(self, score: float) -> float:
         """Return the p-value of a score."""
         n = len(self._maxima)
-        return (1 + n - int(np.searchsorted(self._maxima, score, side="left"))) / (n + 1)
+        return (1 + n - bisect_left(self._maxima, score)) / (n + 1)
