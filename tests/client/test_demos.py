@@ -185,6 +185,62 @@ def test_a_killed_writers_episodes_are_taken_up_by_the_next(
             assert reply.act == np.arange(samples, dtype="<f4").tobytes()
 
 
+def test_a_program_that_ends_without_closing_ends_at_once_and_loses_nothing(
+    rig: Rig, keeper: KeeperProcess, tmp_path: Path
+) -> None:
+    program = WRITER.replace("sys.stdin.read()", "")
+    words = [sys.executable, "-W", "error", "-c", program, rig.model_dump_json(), NOWHERE, str(tmp_path / "spool")]
+    answer = subprocess.run(words, capture_output=True, text=True, timeout=30, check=False)
+    assert (answer.returncode, answer.stderr) == (0, "")
+    with DemonstrationStream(rig, keeper.settings.intake, tmp_path / "spool") as stream:
+        deliveries = stream.flush()
+    assert sorted((one.state, one.acknowledged) for one in deliveries.values()) == [("closed", 1999), ("closed", 2000)]
+
+
+FULL_DISK = """
+import resource, signal, sys, time
+from pathlib import Path
+import numpy as np
+from nearhand.client.demos import DemonstrationStream
+from nearhand.service.errors import StoreError
+from nearhand.service.rigs import Rig
+signal.signal(signal.SIGXFSZ, signal.SIG_IGN)
+resource.setrlimit(resource.RLIMIT_FSIZE, (20_000, 20_000))
+with DemonstrationStream(Rig.model_validate_json(sys.argv[1]), sys.argv[2], Path(sys.argv[3])) as stream:
+    full = stream.open("ann")
+    try:
+        for t in range(100_000):
+            full.add(t * 0.02, np.full(3, t), np.full(1, t))
+            time.sleep(0.0001)
+    except StoreError as error:
+        print(error.code)
+    small = stream.open("ann")
+    for t in range(10):
+        small.add(t * 0.02, np.full(3, t), np.full(1, t))
+    small.close("success", np.full(3, 10))
+    deliveries = stream.flush()
+print(deliveries[full.episode].state, deliveries[small.episode].state, full.episode)
+"""
+
+
+def test_a_full_spool_disk_ends_one_recording_and_keeps_what_was_written(
+    rig: Rig, keeper: KeeperProcess, tmp_path: Path
+) -> None:
+    spool = tmp_path / "spool"
+    words = [sys.executable, "-c", FULL_DISK, rig.model_dump_json(), keeper.settings.intake, str(spool)]
+    answer = subprocess.run(words, capture_output=True, text=True, timeout=60, check=True)
+    code, full, small, episode = answer.stdout.split()
+    assert (code, full, small) == ("store.spool", "rejected", "closed")
+    with DemonstrationStream(rig, keeper.settings.intake, spool) as stream:
+        delivery = stream.flush()[episode]
+    assert delivery.state == "closed"
+    assert 400 < delivery.acknowledged < 20_000 // 24
+    with Desk(keeper.settings.desk) as desk:
+        reply = stored(desk, episode)
+    assert reply.outcome == "cut"
+    assert reply.obs == np.repeat(np.arange(reply.samples + 1, dtype="<f4"), 3).tobytes()
+
+
 def test_what_the_service_rejects_is_kept_and_stops_no_other(rig: Rig, keeper: KeeperProcess, tmp_path: Path) -> None:
     spool = tmp_path / "spool"
     with DemonstrationStream(rig, keeper.settings.intake, spool) as stream:
