@@ -8,12 +8,14 @@ import json
 from pathlib import Path
 from typing import Any
 
+from pydantic import ValidationError
+
 from nearhand.client.desk import Desk
 from nearhand.configs import builtin_names, builtin_text
 from nearhand.service.bus.desk_messages import ListRigs, RigsReply
 from nearhand.service.config import DEFAULT_HOST, DEFAULT_PORTS
 from nearhand.service.errors import ConfigError, UnknownNameError
-from nearhand.service.rigs import Rig, rig_from_toml
+from nearhand.service.rigs import Rig, rig_from_toml, sentence
 
 
 def add_desk_options(parser: argparse.ArgumentParser) -> None:
@@ -64,15 +66,22 @@ def known_rig(desk: Desk, name: str | None) -> str:
 def rig_text(name_or_path: str) -> tuple[Rig, str]:
     """Return a rig and its TOML text, from a file or from those that come with Nearhand.
 
+    A ``.json`` file holds a resolved description, as the desk gives it out; its text comes back as it is.
+
     Raises:
         ConfigError: there is no such file or built-in rig, or it is wrong.
     """
     path = Path(name_or_path)
-    if path.suffix == ".toml":
+    if path.suffix in (".toml", ".json"):
         try:
             text = path.read_text(encoding="utf-8")
         except (OSError, UnicodeDecodeError) as error:
             raise ConfigError(f"cannot read {path}: {error}") from error
+        if path.suffix == ".json":
+            try:
+                return Rig.model_validate_json(text), text
+            except ValidationError as error:
+                raise ConfigError(f"{path}: {sentence(error)}", code="config.rig") from error
         return rig_from_toml(text, origin=str(path)), text
     if name_or_path not in builtin_names("rigs"):
         raise ConfigError(

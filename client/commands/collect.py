@@ -6,6 +6,7 @@ Every sample goes through a spool file first; what the service has acknowledged 
 from __future__ import annotations
 
 import argparse
+import json
 import sys
 import tempfile
 from pathlib import Path
@@ -70,7 +71,9 @@ def _settle_rig(desk: Desk, options: argparse.Namespace, folder: Path) -> tuple[
             raise ConfigError(
                 f"{options.rig!r} is neither a rig that the service knows, a built-in one, nor a .toml file"
             ) from error
-        return Rig.model_validate(known.description), options.rig
+        path = folder / f"{options.rig}.json"
+        path.write_text(json.dumps(known.description), encoding="utf-8")
+        return Rig.model_validate(known.description), str(path)
     desk.ask(PutRig, RigReply, toml=text, who=options.who, why=options.why or "collect")
     path = folder / f"{rig.name}.toml"
     path.write_text(text, encoding="utf-8")
@@ -104,10 +107,12 @@ def _imported(rig: Rig, options: argparse.Namespace, intake: str, spool: Path) -
     episodes = read_csv(options.source, rig)
     with DemonstrationStream(rig, intake, spool) as stream:
         for episode in episodes:
-            recording = stream.open(options.operator or "imported", notes=f"imported from {options.source.name}")
+            recording = stream.open(
+                options.operator or episode.operator or "imported", notes=f"imported from {options.source.name}"
+            )
             for row, time_s in enumerate(episode.times_s):
                 recording.add(float(time_s), episode.observations[row], episode.actions[row])
-            recording.close("unknown", episode.observations[-1])
+            recording.close(episode.outcome, episode.observations[-1], episode.terminated)
         deliveries = stream.flush(DELIVERY_TIMEOUT_S)
     return [_row(name, delivery) for name, delivery in deliveries.items()]
 

@@ -25,9 +25,10 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 
 def run(options: argparse.Namespace) -> int:
     """Run ``inspect``."""
-    with open_desk(options) as desk, JobBar("inspect", quiet=options.json) as bar:
-        rig = known_rig(desk, options.rig)
-        state = wait_job(desk, start_job(desk, "inspect", rig, options.who, {}), show=bar.show)
+    with open_desk(options) as desk:
+        job = start_job(desk, "inspect", known_rig(desk, options.rig), options.who, {})
+        with JobBar("inspect", quiet=options.json) as bar:
+            state = wait_job(desk, job, show=bar.show)
     result = state.result or {}
     if options.json:
         print_json(result)

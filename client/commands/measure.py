@@ -22,7 +22,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 
 def run(options: argparse.Namespace) -> int:
     """Run ``measure``."""
-    with open_desk(options) as desk, JobBar(f"measure {options.version}", quiet=options.json) as bar:
+    with open_desk(options) as desk:
         rig = desk.ask(GetVersion, VersionReply, version=options.version).rig
         wishes = {
             "version": options.version,
@@ -31,7 +31,8 @@ def run(options: argparse.Namespace) -> int:
             "operators": options.operator,
         }
         job = start_job(desk, "measure", rig, options.who, wishes, why=options.why)
-        result = wait_job(desk, job, show=bar.show).result or {}
+        with JobBar(f"measure {options.version}", quiet=options.json) as bar:
+            result = wait_job(desk, job, show=bar.show).result or {}
     if options.json:
         print_json(result)
     else:
