@@ -20,7 +20,8 @@ class CloneRecipe(Frozen):
     ``steps`` bounds the gradient steps; with the default the network is trained to convergence, with a few it is
     under-trained. ``hidden`` are the widths of the tanh layers of every version's network. ``sd_floor`` is the smallest
     standard deviation of the action, in half ranges. ``held_out`` is the part of the training episodes kept out for
-    early stopping and for choosing, once there are at least ``spare_from`` of them.
+    early stopping and for choosing, once there are at least ``spare_from`` of them. ``past_action_noise`` is added to
+    the past actions of the input, in half ranges, so that the policy looks at the machine instead of repeating itself.
     """
 
     steps: Annotated[int, Field(ge=1, le=1_000_000)] = 10_000
@@ -30,6 +31,7 @@ class CloneRecipe(Frozen):
     weight_decay: Annotated[FiniteFloat, Field(ge=0)] = 1e-4
     sd_floor: Positive = 0.01
     held_out: Fraction = 0.2
+    past_action_noise: Annotated[FiniteFloat, Field(ge=0)] = 0.3
     spare_from: Annotated[int, Field(ge=2)] = 6
 
 
@@ -40,14 +42,16 @@ class OnlineRecipe(Frozen):
     divergence of each improvement, annealed geometrically over the run. ``sd_start`` is the least standard deviation
     of the explored actions at the first iteration and ``sd_floor`` at the last, in half ranges. ``ess_floor`` is the
     least share of effective samples under the tilted weights. ``anchor`` weighs the cloning term of the improvement.
+    The critic starts from nothing, so the first evaluation takes ``first_inner_steps`` instead of ``inner_steps``.
     """
 
     iterations: Annotated[int, Field(ge=1, le=10_000)] = 40
-    episodes: Annotated[int, Field(ge=2, le=4096)] = 16
+    episodes: Annotated[int, Field(ge=2, le=4096)] = 32
     transitions: Annotated[int, Field(ge=64, le=1_000_000)] = 6000
     discount: Annotated[FiniteFloat, Field(ge=0, lt=1)] = 0.0
     critic_hidden: tuple[Width, ...] = Field(default=(64, 64), min_length=1, max_length=4)
     inner_steps: Annotated[int, Field(ge=1, le=10_000)] = 40
+    first_inner_steps: Annotated[int, Field(ge=1, le=10_000)] = 200
     learning_rate: Positive = 3e-3
     kl_first: Positive = 0.05
     kl_last: Positive = 0.005
@@ -59,7 +63,7 @@ class OnlineRecipe(Frozen):
     sd_start: Positive = 0.1
     sd_floor: Positive = 0.03
     ess_floor: Fraction = 0.5
-    anchor: Annotated[FiniteFloat, Field(ge=0)] = 0.3
+    anchor: Annotated[FiniteFloat, Field(ge=0)] = 1.0
     averaging: Fraction = 0.9
 
 
@@ -84,7 +88,7 @@ class SelectionRecipe(Frozen):
     """Which iterates are tried, and in how many fresh roll-outs each."""
 
     every: Annotated[int, Field(ge=1, le=10_000)] = 8
-    episodes: Annotated[int, Field(ge=2, le=4096)] = 32
+    episodes: Annotated[int, Field(ge=2, le=4096)] = 64
     segments: Annotated[int, Field(ge=1, le=64)] = 4
 
 

@@ -10,7 +10,7 @@ import torch
 from torch import Tensor
 
 from nearhand.service.errors import LearningError
-from nearhand.service.learn.demonstrations import Demonstration, hold_out, stack_pairs
+from nearhand.service.learn.demonstrations import Demonstration, blur_past_actions, hold_out, stack_pairs
 from nearhand.service.learn.layers import Adam, Layers, cosine_rate, draw_batches
 from nearhand.service.policy.network import Float32
 from nearhand.service.recipes import CloneRecipe
@@ -96,6 +96,7 @@ def _fit(
     train: Sequence[Demonstration],
     held_out: Sequence[Demonstration],
     recipe: CloneRecipe,
+    history: int,
     seed: Sequence[int],
     tell: Tell,
     stopped: Callable[[], bool],
@@ -103,7 +104,7 @@ def _fit(
     """Fit one network; return the latest look near the best held-out one, or the last if none is held out."""
     generator = np.random.default_rng(seed)
     windows, actions, weights = stack_pairs(train)
-    inputs, targets, row_weights = (torch.from_numpy(array) for array in (windows, actions, weights))
+    targets, row_weights = torch.from_numpy(actions), torch.from_numpy(weights)
     optimiser = Adam(layers.draw(generator, last_gain=0.1), decay=recipe.weight_decay * layers.decay_mask())
     flat = optimiser.values.requires_grad_()
     floor = float(recipe.sd_floor**2)
@@ -114,8 +115,10 @@ def _fit(
     for step in range(1, recipe.steps + 1):
         if not batches:
             batches = list(draw_batches(generator, len(windows), recipe.batch))
-        rows = torch.from_numpy(batches.pop())
-        errors = torch.square(layers(flat, inputs[rows]) - targets[rows])
+        picked = batches.pop()
+        rows = torch.from_numpy(picked)
+        seen = torch.from_numpy(blur_past_actions(windows[picked], history, recipe.past_action_noise, generator))
+        errors = torch.square(layers(flat, seen) - targets[rows])
         # The likelihood with the best standard deviation put in: every channel counts in its own spread.
         loss = 0.5 * torch.log((row_weights[rows, None] * errors).mean(dim=0) + floor).sum()
         (gradient,) = torch.autograd.grad(loss, flat)
@@ -151,6 +154,7 @@ def clone(
     tell: Tell,
     stopped: Callable[[], bool],
     *,
+    history: int = 0,
     probing: bool = False,
 ) -> Clone:
     """Fit a policy to the demonstrations, stopping early by whole episodes that were kept out.
@@ -160,6 +164,7 @@ def clone(
 
     Args:
         demonstrations, recipe, seed, tell, stopped: see there.
+        history: columns of past actions at the end of a window.
         probing: if no episode is spared, fit a second network that did not see some of them, to compare with.
 
     Raises:
@@ -174,15 +179,29 @@ def clone(
     kept = [item for index, item in enumerate(demonstrations) if index not in indices]
     held = [demonstrations[index] for index in indices]
     if count >= recipe.spare_from:
-        actor, steps, curves = _fit(layers, kept, held, recipe, (seed, 1, 2), tell, stopped)
+        actor, steps, curves = _fit(layers, kept, held, recipe, history, (seed, 1, 2), tell, stopped)
         return Clone(actor, actor, steps, indices, True, curves, f"{len(held)} of {count} episodes kept out")
     part = 0.5 if probing and held else 1.0
     actor, steps, curves = _fit(
-        layers, demonstrations, (), recipe, (seed, 1, 2), lambda done, figures: tell(part * done, figures), stopped
+        layers,
+        demonstrations,
+        (),
+        recipe,
+        history,
+        (seed, 1, 2),
+        lambda done, figures: tell(part * done, figures),
+        stopped,
     )
     probe = None
     if part < 1:
         probe, _, _ = _fit(
-            layers, kept, (), recipe, (seed, 1, 2), lambda done, figures: tell(0.5 + part * done, figures), stopped
+            layers,
+            kept,
+            (),
+            recipe,
+            history,
+            (seed, 1, 2),
+            lambda done, figures: tell(0.5 + part * done, figures),
+            stopped,
         )
     return Clone(actor, probe, steps, indices, False, curves, "too few episodes to spare one: all fitted to the end")

@@ -101,6 +101,25 @@ def stack_pairs(demonstrations: Sequence[Demonstration]) -> tuple[Float32, Float
     return windows, actions, (weights / weights.mean()).astype(np.float32)
 
 
+def blur_past_actions(rows: Float32, history: int, sd: float, generator: np.random.Generator) -> Float32:
+    """Return windows (N, d) with one draw of noise per row on their last ``history`` columns.
+
+    Smooth driving makes the last action an excellent guess of the next, which a policy that only repeats itself never
+    corrects. Blurring the past actions together hides their level and keeps their change.
+
+    Args:
+        rows: windows; not changed.
+        history: columns of past actions, all channels.
+        sd: in half ranges; 0 returns the rows as they are.
+        generator: draws the noise.
+    """
+    if history == 0 or sd == 0:
+        return rows
+    blurred = rows.copy()
+    blurred[:, -history:] += (sd * generator.standard_normal((len(rows), 1))).astype(np.float32)
+    return blurred
+
+
 def hold_out(count: int, fraction: float, generator: np.random.Generator) -> NDArray[np.int64]:
     """Return the sorted indices of the episodes kept out: at least one, never all but none."""
     kept = min(max(round(fraction * count), 1), count - 1)

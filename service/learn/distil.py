@@ -196,6 +196,7 @@ def _clone(folder: JobFolder, lesson: Lesson, reporter: Reporter, stopped: Stopp
     made = clone(
         lesson.demonstrations, lesson.recipe.clone, lesson.recipe.seed,
         lambda done, figures: reporter.report("cloning", done, figures), stopped,
+        history=lesson.blank.past_actions * m,
         probing=lesson.recipe.method == "proximal-offline" or lesson.rig.simulator is None,
     )  # fmt: skip
     facts = {
@@ -224,9 +225,9 @@ def _improve(
     held = [lesson.demonstrations[index] for index in cloned.held_out]
     if method == "proximal-offline":
         return _offline(lesson, cloned, kept, held, reporter, stopped, [message] if message else [])
-    if not cloned.spared:
-        kept = held = lesson.demonstrations
-    return _online(folder, lesson, cloned, kept, held, reporter, stopped, executor)
+    return _online(
+        folder, lesson, cloned, held if cloned.spared else lesson.demonstrations, reporter, stopped, executor
+    )
 
 
 def _offline(
@@ -271,7 +272,6 @@ def _online(
     folder: JobFolder,
     lesson: Lesson,
     cloned: Clone,
-    kept: Sequence[Demonstration],
     held: Sequence[Demonstration],
     reporter: Reporter,
     stopped: Stopped,
@@ -284,7 +284,7 @@ def _online(
     scene = Scene(
         rig=lesson.rig,
         blank=lesson.blank,
-        demonstrations=kept,
+        demonstrations=lesson.demonstrations,
         features=fit_features(len(lesson.rig.observations), lesson.demonstrations),
         discount=effective_discount(recipe.online.discount, lengths),
         horizon=min(int(simulator.max_steps), max(lengths)),
@@ -292,7 +292,7 @@ def _online(
         executor=executor,
         seed=recipe.seed,
     )
-    run = OnlineProximalPoint(scene, cloned.actor, recipe.online)
+    run = OnlineProximalPoint(scene, cloned.actor, recipe.online, past_action_noise=recipe.clone.past_action_noise)
     restore_progress(folder, run, lesson.identity)
     total = recipe.online.iterations
     while run.progress.iteration < total:
@@ -317,7 +317,7 @@ def _online(
     chosen = {
         "name": choice.name, "reason": choice.reason, "distances": choice.distances, "held_out_nll": choice.nlls,
         "floor": choice.floor,
-        "selected_on": "episodes kept out" if cloned.spared else "the training episodes, too few to spare one",
+        "likelihood_of": "episodes kept out" if cloned.spared else "the training episodes, too few to spare one",
     }  # fmt: skip
     progress = run.progress
     return Improved(

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from statistics import NormalDist
 
 import numpy as np
 from numpy.typing import NDArray
@@ -17,6 +18,8 @@ BEND_SD = 5.0
 #: Least spread of an action and of a feature, in half ranges and in units of the standardised coordinates.
 ACTION_SD_FLOOR = 0.02
 FEATURE_SD_FLOOR = 0.1
+#: Quantiles of the rank features, and the least distance of two, in standard deviations.
+QUANTILES, KNOT_SPACING = 40, 2e-3
 #: Beyond so many coordinates, products of different coordinates are left out.
 MAX_CROSSED = 24
 
@@ -26,12 +29,15 @@ class CostFeatures:
     """The map (window, applied action) → features; the absorbing state's indicator is kept apart from it.
 
     Coordinates z are the present observation (already standardised) and the action standardised on the demonstrations;
-    features are z and the products z_i z_j, centred and scaled on the demonstrations.
+    features are z, the products z_i z_j, and of each coordinate's rank r among the demonstrations, as a normal score,
+    r and r². All are centred and scaled on the demonstrations. Ranks resolve what the expert does finely: where it
+    spends much time, as at a landing, a small miss is a large step in rank that the plain squares cannot see.
 
     Attributes:
         n: observation channels, the first ``n`` columns of a window.
         action_mean, action_sd: (m,).
         rows, columns: indices of the products.
+        knots: (q, p) quantiles of each coordinate; ``scores`` (q,) their normal scores.
         centre, scale: (k,) of the raw features.
     """
 
@@ -40,6 +46,8 @@ class CostFeatures:
     action_sd: Float32
     rows: NDArray[np.int64]
     columns: NDArray[np.int64]
+    knots: Float64
+    scores: Float64
     centre: Float32
     scale: Float32
 
@@ -50,34 +58,19 @@ class CostFeatures:
 
     def __call__(self, windows: Float32, actions: Float32) -> Float32:
         """Return features (N, k) of windows (N, d) and applied actions (N, m) in half ranges."""
-        raw = _raw(self.n, self.action_mean, self.action_sd, self.rows, self.columns, windows, actions)
+        z = _coordinates(self.n, self.action_mean, self.action_sd, windows, actions)
+        raw = _raw(z, self.rows, self.columns, self.knots, self.scores)
         return np.asarray((raw - self.centre) / self.scale, dtype=np.float32)
 
-    def action_noise_shift(self, variance: Float64) -> Float64:
-        """Return how the mean features (k,) move when independent noise (m,) is added to the action.
 
-        Only the squares move, by variance/sd² before scaling; the bending is not counted. Derived here.
-        """
-        shift = np.zeros(self.count)
-        first = self.n + len(self.action_mean)
-        for channel in range(len(self.action_mean)):
-            square = (self.rows == self.n + channel) & (self.columns == self.n + channel)
-            shift[first:][square] = variance[channel] / self.action_sd[channel] ** 2
-        return shift / self.scale
-
-
-def _raw(
-    n: int,
-    action_mean: Float32,
-    action_sd: Float32,
-    rows: NDArray[np.int64],
-    columns: NDArray[np.int64],
-    windows: Float32,
-    actions: Float32,
-) -> Float32:
+def _coordinates(n: int, action_mean: Float32, action_sd: Float32, windows: Float32, actions: Float32) -> Float32:
     z = np.concatenate([windows[:, :n], (actions - action_mean) / action_sd], axis=1)
-    z = (BEND_SD * np.tanh(z / BEND_SD)).astype(np.float32)
-    return np.concatenate([z, z[:, rows] * z[:, columns]], axis=1)
+    return (BEND_SD * np.tanh(z / BEND_SD)).astype(np.float32)
+
+
+def _raw(z: Float32, rows: NDArray[np.int64], columns: NDArray[np.int64], knots: Float64, scores: Float64) -> Float32:
+    ranks = np.stack([np.interp(z[:, i], knots[:, i], scores) for i in range(z.shape[1])], axis=1).astype(np.float32)
+    return np.concatenate([z, z[:, rows] * z[:, columns], ranks, np.square(ranks)], axis=1)
 
 
 def fit_features(n: int, demonstrations: Sequence[Demonstration]) -> CostFeatures:
@@ -88,7 +81,12 @@ def fit_features(n: int, demonstrations: Sequence[Demonstration]) -> CostFeature
     sd = np.maximum(spread, ACTION_SD_FLOOR).astype(np.float32)
     size = n + actions.shape[1]
     rows, columns = np.triu_indices(size) if size <= MAX_CROSSED else (np.arange(size), np.arange(size))
-    raw = _raw(n, mean, sd, rows, columns, windows, actions).astype(np.float64)
+    z = _coordinates(n, mean, sd, windows, actions)
+    levels = (np.arange(QUANTILES) + 0.5) / QUANTILES
+    # Values that the expert repeats exactly would make a step of no width; give every step a least width.
+    knots = np.quantile(z.astype(np.float64), levels, axis=0) + KNOT_SPACING * np.arange(QUANTILES)[:, None]
+    scores = np.asarray([NormalDist().inv_cdf(float(level)) for level in levels])
+    raw = _raw(z, rows, columns, knots, scores).astype(np.float64)
     centre = np.average(raw, axis=0, weights=weights)
     scale = np.sqrt(np.average(np.square(raw - centre), axis=0, weights=weights))
     return CostFeatures(
@@ -97,6 +95,8 @@ def fit_features(n: int, demonstrations: Sequence[Demonstration]) -> CostFeature
         action_sd=sd,
         rows=rows,
         columns=columns,
+        knots=knots,
+        scores=scores,
         centre=centre.astype(np.float32),
         scale=np.maximum(scale, FEATURE_SD_FLOOR).astype(np.float32),
     )

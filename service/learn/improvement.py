@@ -13,6 +13,7 @@ import torch
 from torch import Tensor
 
 from nearhand.service.learn.critic import Coefficients, action_value, improved_gaussian
+from nearhand.service.learn.demonstrations import blur_past_actions
 from nearhand.service.learn.layers import Adam, Layers
 from nearhand.service.policy.network import Float32
 
@@ -91,13 +92,18 @@ def sampled_targets(
 
 @dataclass(frozen=True)
 class Anchor:
-    """The cloning term: demonstration windows (N, d), actions (N, m), row weights (N,), its weight, rows a step."""
+    """The cloning term: demonstration windows (N, d), actions (N, m), row weights (N,), its weight, rows a step.
 
-    windows: Tensor
+    ``history`` columns of past actions are blurred by ``blur``, as in cloning.
+    """
+
+    windows: Float32
     actions: Tensor
     row_weights: Tensor
     weight: float
     batch: int
+    history: int = 0
+    blur: float = 0.0
 
 
 def fit_mean(
@@ -118,9 +124,11 @@ def fit_mean(
     flat = actor.values.requires_grad_()
     before = flat.detach().clone()
     for _ in range(steps):
-        rows = torch.from_numpy(generator.integers(len(anchor.windows), size=anchor.batch))
+        picked = generator.integers(len(anchor.windows), size=anchor.batch)
+        rows = torch.from_numpy(picked)
+        shown = torch.from_numpy(blur_past_actions(anchor.windows[picked], anchor.history, anchor.blur, generator))
         gap = (layers(flat, windows) - targets.mean).square() / (2 * old_variance)
-        clone_gap = (layers(flat, anchor.windows[rows]) - anchor.actions[rows]).square() / (2 * old_variance)
+        clone_gap = (layers(flat, shown) - anchor.actions[rows]).square() / (2 * old_variance)
         clone_term = (anchor.row_weights[rows, None] * clone_gap).sum(dim=1).mean()
         loss = gap.sum(dim=1).mean() + anchor.weight * clone_term
         (gradient,) = torch.autograd.grad(loss, flat)

@@ -42,6 +42,7 @@ class Offline:
 def as_rollouts(demonstrations: Sequence[Demonstration]) -> Rollouts:
     """Return demonstrations in the form of roll-outs, padded to the longest by their last window."""
     periods = max(item.length for item in demonstrations)
+    weights = np.asarray([item.weight for item in demonstrations], dtype=np.float64)
     windows = [np.pad(d.windows, ((0, periods - d.length), (0, 0)), mode="edge") for d in demonstrations]
     actions = np.stack([np.pad(d.actions, ((0, periods - d.length), (0, 0))) for d in demonstrations])
     return Rollouts(
@@ -50,6 +51,7 @@ def as_rollouts(demonstrations: Sequence[Demonstration]) -> Rollouts:
         applied=actions,
         lengths=np.asarray([item.length for item in demonstrations], dtype=np.int64),
         terminated=np.asarray([item.terminated for item in demonstrations]),
+        shares=weights / weights.sum(),
     )
 
 
@@ -111,7 +113,7 @@ class _Fit:
         with torch.no_grad():
             project_cost(self.cost.values)
             self.log_sd.values.clamp_(min=self.low)
-        return delta.detach(), float(gain)
+        return delta.detach(), float(gain.detach())
 
     def actor(self) -> Actor:
         """Return the policy as it stands."""
@@ -148,7 +150,7 @@ def fit_offline(
     features = fit_features(n, train)
     discount = effective_discount(recipe.discount, [item.length for item in train])
     rollouts = as_rollouts(train)
-    means, _, _ = mean_features(features, rollouts, discount)
+    means = mean_features(features, rollouts, discount)
     expert = torch.from_numpy(means.astype(np.float32))
     fit = _Fit(start, features, discount, recipe, sd_floor, seed)
     clone_nll = held_out_nll(start, held_out, sd_floor) if held_out else float("nan")

@@ -5,7 +5,7 @@ from __future__ import annotations
 import time
 from collections.abc import Sequence
 from concurrent.futures import Executor
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 import torch
@@ -36,6 +36,7 @@ from nearhand.service.learn.objective import (
 )
 from nearhand.service.learn.rollouts import MakeSimulator, Rollouts, roll_out, served
 from nearhand.service.learn.sampling import draw_sample, mean_features
+from nearhand.service.learn.starts import balance
 from nearhand.service.policy.network import Float32, Policy
 from nearhand.service.recipes import OnlineRecipe
 from nearhand.service.rigs import Rig
@@ -58,6 +59,14 @@ class Scene:
     make: MakeSimulator
     executor: Executor
     seed: int
+
+
+def matched(scene: Scene, rollouts: Rollouts) -> Rollouts:
+    """Return the roll-outs with shares that make them start where the demonstrations did."""
+    n = scene.features.n
+    shown = np.stack([item.windows[0, :n] for item in scene.demonstrations])
+    weights = np.asarray([item.weight for item in scene.demonstrations], dtype=np.float64)
+    return replace(rollouts, shares=balance(rollouts.windows[:, 0, :n], shown, weights))
 
 
 @dataclass
@@ -97,20 +106,19 @@ class _Evaluated:
 class OnlineProximalPoint:
     """One run from a cloned policy; ``iterate`` makes one proximal-point step and returns its figures."""
 
-    def __init__(self, scene: Scene, clone: Actor, recipe: OnlineRecipe) -> None:
+    def __init__(self, scene: Scene, clone: Actor, recipe: OnlineRecipe, *, past_action_noise: float = 0.0) -> None:
         self.scene, self.recipe, self.clone = scene, recipe, clone
         d, m = scene.blank.input_size, scene.blank.action_size
         self._critic = QuadraticCritic(d, m, recipe.critic_hidden, gain=float((1 - scene.discount) ** -0.5))
         generator = np.random.default_rng((scene.seed, 2, 0))
         windows, actions, weights = stack_pairs(scene.demonstrations)
         self._anchor = Anchor(
-            torch.from_numpy(windows), torch.from_numpy(actions), torch.from_numpy(weights), recipe.anchor,
-            batch=min(1024, len(windows)),
+            windows, torch.from_numpy(actions), torch.from_numpy(weights), recipe.anchor,
+            batch=min(1024, len(windows)), history=scene.blank.past_actions * m, blur=past_action_noise,
         )  # fmt: skip
-        means, absorbed = discounted_means(scene.features, scene.demonstrations, scene.discount, scene.horizon)
-        share = np.asarray([item.weight for item in scene.demonstrations])
-        share = share / share.sum()
-        self._expert = np.append(share @ means, share @ absorbed)
+        means, _ = discounted_means(scene.features, scene.demonstrations, scene.discount, scene.horizon)
+        weights_of_episodes = np.asarray([item.weight for item in scene.demonstrations])
+        self._share = weights_of_episodes / weights_of_episodes.sum()
         self._expert_trace = float(np.var(means, axis=0, ddof=1).sum()) if len(means) > 1 else float("nan")
         size = scene.features.count + 1
         self.progress = Progress(
@@ -138,7 +146,7 @@ class OnlineProximalPoint:
         generator = np.random.default_rng((scene.seed, 2, 1, state.iteration))
         sample = draw_sample(scene.features, rollouts, reference, scene.discount, recipe.transitions, generator)
         variance = torch.from_numpy(np.exp(2 * reference.log_sd))
-        expert = self._expert + np.append(scene.features.action_noise_shift(self._noise(rollouts, reference)), 0.0)
+        expert = self._expert(self._noise(rollouts, reference))
         critic, cost, absorbing = state.critic.values, state.cost.values, state.absorbing.values
         for leaf in (critic, cost, absorbing):
             leaf.requires_grad_()
@@ -152,7 +160,7 @@ class OnlineProximalPoint:
                 setting = Setting(1.0, alpha, scene.discount, variance, setting.expert)
                 delta, _, at = residuals(self._critic, critic, cost, absorbing[0], sample, setting)
         value = float("nan")
-        for step in range(recipe.inner_steps):
+        for step in range(recipe.inner_steps if state.iteration else max(recipe.first_inner_steps, recipe.inner_steps)):
             if step % 10 == 0:
                 eta, _ = tilting_strength(sample.log_weight, delta.detach(), recipe.ess_floor)
                 setting = Setting(eta, setting.alpha, scene.discount, variance, setting.expert)
@@ -186,6 +194,21 @@ class OnlineProximalPoint:
             sample.windows[sample.here], sample.mean[sample.here], variance, at.at(sample.here), expert
         )
 
+    def _expert(self, variance: Float64) -> Float64:
+        """Return the expert's feature expectations (k + 1,), had its actions been explored with this variance (m,).
+
+        Without it the cost would first of all punish the exploring itself, which the served policy does not do.
+        """
+        scene = self.scene
+        generator = np.random.default_rng((scene.seed, 2, 4, self.progress.iteration))
+        sd = np.sqrt(variance).astype(np.float32)
+        explored = [
+            replace(item, actions=item.actions + sd * generator.standard_normal(item.actions.shape).astype(np.float32))
+            for item in scene.demonstrations
+        ]
+        means, absorbed = discounted_means(scene.features, explored, scene.discount, scene.horizon)
+        return np.append(self._share @ means, self._share @ absorbed)
+
     def _noise(self, rollouts: Rollouts, reference: Actor) -> Float64:
         """Return the action variance (m,) that exploring adds to the expert's own, as it passed the limits."""
         count, periods = rollouts.asked.shape[:2]
@@ -218,7 +241,8 @@ class OnlineProximalPoint:
             scene.executor, scene.make, scene.rig, served(scene.blank, reference), recipe.episodes, scene.horizon,
             (scene.seed, 2, 2, state.iteration), noisy=True,
         )  # fmt: skip
-        means, _, _ = mean_features(scene.features, rollouts, scene.discount)
+        rollouts = matched(scene, rollouts)
+        means = mean_features(scene.features, rollouts, scene.discount)
         figures, evaluated = self._evaluate(rollouts, reference)
         distance = float(np.linalg.norm(means - evaluated.expert))
         message = self._keep_or_return(distance, reference)

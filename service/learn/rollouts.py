@@ -30,6 +30,7 @@ class Rollouts:
         applied: (B, T, m) what passed the limits.
         lengths: (B,) periods lived.
         terminated: (B,) ended in a true terminal state.
+        shares: (B,) weight of each episode, summing to one.
     """
 
     windows: Float32
@@ -37,6 +38,7 @@ class Rollouts:
     applied: Float32
     lengths: NDArray[np.int64]
     terminated: NDArray[np.bool_]
+    shares: NDArray[np.float64]
 
     @property
     def steps(self) -> int:
@@ -144,7 +146,7 @@ def drive(
         if not alive.any():
             windows, asked, applied = windows[:, : t + 2], asked[:, : t + 1], applied[:, : t + 1]
             break
-    return Rollouts(windows, asked, applied, lengths, terminated)
+    return Rollouts(windows, asked, applied, lengths, terminated, np.full(count, 1 / count))
 
 
 def roll_out(
@@ -195,4 +197,5 @@ def join(pieces: Sequence[Rollouts]) -> Rollouts:
         applied=np.concatenate([padded(piece.applied, periods, "constant") for piece in pieces]),
         lengths=np.concatenate([piece.lengths for piece in pieces]),
         terminated=np.concatenate([piece.terminated for piece in pieces]),
+        shares=np.full(sum(len(piece.lengths) for piece in pieces), 1 / sum(len(piece.lengths) for piece in pieces)),
     )

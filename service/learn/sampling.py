@@ -22,7 +22,7 @@ class Occupancy:
     Attributes:
         weights: (B, T) of the lived periods; with ``absorbing`` they sum to one.
         absorbing: mass on the absorbing state.
-        total: mean mass of an episode before this normalisation, times B.
+        total: mean mass of an episode before this normalisation.
     """
 
     weights: Float64
@@ -30,11 +30,12 @@ class Occupancy:
     total: float
 
 
-def occupancy(lengths: NDArray[np.int64], terminated: NDArray[np.bool_], periods: int, discount: float) -> Occupancy:
+def occupancy(rollouts: Rollouts, discount: float) -> Occupancy:
     """Return the occupancy: (1-g) g^t per lived period, g^T on the absorbing state after a true terminal only."""
+    lengths, periods = rollouts.lengths, rollouts.asked.shape[1]
     powers = (1 - discount) * discount ** np.arange(periods)
-    weights = powers * (np.arange(periods) < lengths[:, None])
-    tail = float((terminated * discount**lengths).sum())
+    weights = rollouts.shares[:, None] * powers * (np.arange(periods) < lengths[:, None])
+    tail = float((rollouts.shares * rollouts.terminated * discount**lengths).sum())
     total = float(weights.sum()) + tail
     return Occupancy(weights / total, tail / total, total)
 
@@ -49,12 +50,12 @@ def systematic(weights: Float64, count: int, generator: np.random.Generator) -> 
 def mean_features(features: CostFeatures, rollouts: Rollouts, discount: float) -> tuple[Float64, Float64, Occupancy]:
     """Return the roll-outs' mean features (k + 1,), the absorbing mass last, each episode's (B, k), and the weights."""
     count, periods = rollouts.asked.shape[:2]
-    mass = occupancy(rollouts.lengths, rollouts.terminated, periods, discount)
+    mass = occupancy(rollouts, discount)
     flat = features(
         rollouts.windows[:, :-1].reshape(count * periods, -1), rollouts.applied.reshape(count * periods, -1)
     )
-    each = np.einsum("bt,btk->bk", mass.weights, flat.reshape(count, periods, -1).astype(np.float64))
-    return np.append(each.sum(axis=0), mass.absorbing), each * count, mass
+    mean = np.einsum("bt,btk->k", mass.weights, flat.reshape(count, periods, -1).astype(np.float64))
+    return np.append(mean, mass.absorbing)
 
 
 def draw_sample(
@@ -67,7 +68,7 @@ def draw_sample(
 ) -> Sample:
     """Return the transitions of one evaluation: all of them, or ``transitions`` resampled by their weight."""
     count, periods = rollouts.asked.shape[:2]
-    mass = occupancy(rollouts.lengths, rollouts.terminated, periods, discount)
+    mass = occupancy(rollouts, discount)
     lived = np.flatnonzero(mass.weights.ravel() > 0)
     weights = mass.weights.ravel()[lived]
     if len(lived) > transitions:
@@ -83,7 +84,7 @@ def draw_sample(
     n = len(lived)
     with np.errstate(divide="ignore"):
         log_weight = np.log(np.append(weights, mass.absorbing))
-    share = (1 - discount) / mass.total
+    share = (1 - discount) * rollouts.shares / mass.total
     flow_last = np.where(rollouts.terminated, 0.0, share * discount**rollouts.lengths)
 
     def whole(array: NDArray[np.int64]) -> torch.Tensor:
@@ -108,6 +109,6 @@ def draw_sample(
         log_weight=real(log_weight),
         first=whole(places[2 * n : 2 * n + count]),
         last=whole(places[2 * n + count :]),
-        flow_first=real(np.full(count, share)),
+        flow_first=real(share),
         flow_last=real(flow_last),
     )

@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from nearhand.service.learn.cloning import Actor, held_out_nll
 from nearhand.service.learn.demonstrations import Demonstration
 from nearhand.service.learn.features import CostFeatures, Float64
-from nearhand.service.learn.online import Scene
+from nearhand.service.learn.online import Scene, matched
 from nearhand.service.learn.rollouts import Rollouts, roll_out, served
 from nearhand.service.policy.network import Float32
 
@@ -27,9 +27,10 @@ RESAMPLES = 400
 
 @dataclass(frozen=True)
 class Trial:
-    """One candidate's figures: segment features of each roll-out (B, q), its distance, its held-out likelihood."""
+    """One candidate's figures: segment features of each roll-out (B, q) with shares (B,), distance, likelihood."""
 
     each: Float64
+    shares: Float64
     distance: float
     nll: float
 
@@ -97,22 +98,22 @@ def rolled_segments(features: CostFeatures, rollouts: Rollouts, horizon: int, se
     )
 
 
-def known_mean(rows: Float64) -> Float64:
-    """Return the mean over episodes of what is known, NaN where nothing is."""
+def known_mean(rows: Float64, shares: Float64) -> Float64:
+    """Return the weighted mean over episodes of what is known, NaN where nothing is."""
     known = np.isfinite(rows)
-    count = known.sum(axis=0)
-    return np.asarray(np.where(count > 0, np.where(known, rows, 0.0).sum(axis=0) / np.maximum(count, 1), np.nan))
+    mass = shares @ known
+    return np.asarray(np.where(mass > 0, shares @ np.where(known, rows, 0.0) / np.maximum(mass, 1e-300), np.nan))
 
 
-def square_gap(each: Float64, expert: Float64) -> float:
+def square_gap(each: Float64, shares: Float64, expert: Float64) -> float:
     """Return the squared distance of the mean features, over the parts that both know."""
-    gap = known_mean(each) - known_mean(expert)
+    gap = known_mean(each, shares) - known_mean(expert, np.ones(len(expert)))
     return float(np.square(gap[np.isfinite(gap)]).sum())
 
 
-def distance(each: Float64, expert: Float64, segments: int) -> float:
+def distance(each: Float64, shares: Float64, expert: Float64, segments: int) -> float:
     """Return the root mean square over the parts of the gap between the mean features."""
-    return float(np.sqrt(square_gap(each, expert) / segments))
+    return float(np.sqrt(square_gap(each, shares, expert) / segments))
 
 
 def expert_floor(expert: Float64, rollouts: int, segments: int) -> float:
@@ -124,16 +125,17 @@ def expert_floor(expert: Float64, rollouts: int, segments: int) -> float:
     return float(np.sqrt(trace * (1 / len(expert) + 1 / rollouts) / segments))
 
 
-def share_nearer(candidate: Float64, clone: Float64, expert: Float64, generator: np.random.Generator) -> float:
+def share_nearer(candidate: Trial, clone: Trial, expert: Float64, generator: np.random.Generator) -> float:
     """Return the share of bootstrap resamples in which the candidate is nearer to the expert than the clone.
 
     Roll-outs are resampled in pairs of one start state, the demonstrations once for both.
     """
-    nearer = 0
+    nearer, count = 0, len(candidate.each)
     for _ in range(RESAMPLES):
-        rows = generator.integers(len(candidate), size=len(candidate))
+        rows = generator.integers(count, size=count)
+        shares = candidate.shares[rows]
         shown = expert[generator.integers(len(expert), size=len(expert))]
-        nearer += square_gap(candidate[rows], shown) < square_gap(clone[rows], shown)
+        nearer += square_gap(candidate.each[rows], shares, shown) < square_gap(clone.each[rows], shares, shown)
     return nearer / RESAMPLES
 
 
@@ -145,7 +147,7 @@ class Selector:
     ) -> None:
         self._sd_floor = sd_floor
         self._scene, self._selection, self._episodes, self._segments = scene, selection, episodes, segments
-        self._expert = demonstrated_segments(scene.features, selection, scene.horizon, segments)
+        self._expert = demonstrated_segments(scene.features, scene.demonstrations, scene.horizon, segments)
         self.steps = 0
 
     def trial(self, actor: Actor, stage: int) -> Trial:
@@ -156,10 +158,10 @@ class Selector:
             (scene.seed, 3, stage), noisy=False,
         )  # fmt: skip
         self.steps += rollouts.steps
+        rollouts = matched(scene, rollouts)
         each = rolled_segments(scene.features, rollouts, scene.horizon, self._segments)
-        return Trial(
-            each, distance(each, self._expert, self._segments), held_out_nll(actor, self._selection, self._sd_floor)
-        )
+        near = distance(each, rollouts.shares, self._expert, self._segments)
+        return Trial(each, rollouts.shares, near, held_out_nll(actor, self._selection, self._sd_floor))
 
     def choose(self, first: Mapping[str, Trial], candidates: Mapping[str, Actor]) -> Choice:
         """Return the nearest candidate of a first round if fresh roll-outs confirm it, else the clone.
@@ -177,7 +179,7 @@ class Selector:
         else:
             fresh = {one: self.trial(candidates[one], 1) for one in ("clone", name)}
             generator = np.random.default_rng((self._scene.seed, 3, 9))
-            sure = share_nearer(fresh[name].each, fresh["clone"].each, self._expert, generator)
+            sure = share_nearer(fresh[name], fresh["clone"], self._expert, generator)
             both = f"{fresh[name].distance:.3g} against the clone's {fresh['clone'].distance:.3g} (floor {floor:.3g})"
             if sure >= CONFIDENCE and distances[name] < distances["clone"]:
                 reason = f"nearest to the expert in fresh roll-outs: feature distance {both}, sure to {sure:.0%}"

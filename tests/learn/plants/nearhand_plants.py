@@ -122,7 +122,11 @@ class DoubleIntegrator(Plant):
         noise = self.generator.normal(0, 0.01, state.shape)
         score = -(np.square(state).sum(axis=1) + 0.1 * np.square(action).sum(axis=1))
         following = state @ self.A.T + action @ self.B.T + noise
-        return following, score, (np.abs(following[:, 0]) > self.fall if self.fall else np.zeros(len(state), dtype=bool))
+        return (
+            following,
+            score,
+            (np.abs(following[:, 0]) > self.fall if self.fall else np.zeros(len(state), dtype=bool)),
+        )
 
 
 class SoftRegulator:
