@@ -260,6 +260,7 @@ def drive(
     on_step: Callable[[int], None] | None = None,
     on_episode: Callable[[int, DrivenEpisode], None] | None = None,
     faults: Faults = Faults(),
+    patience_s: float = 0.0,
 ) -> DriveResult:
     """Let the service drive the simulated rig in closed loop, each episode in a session of its own.
 
@@ -272,11 +273,12 @@ def drive(
         on_step: told the number of steps so far in the run.
         on_episode: told of each episode at its end.
         faults: what goes wrong on purpose.
+        patience_s: how long the machine waits before an episode, at rest, for an operator to arm it.
 
     Raises:
         ConfigError: the rig has no simulator, or it does not fit.
     """
-    run = _Run(rig, build_simulator(rig), faults, max_steps, paced, on_step)
+    run = _Run(rig, build_simulator(rig), faults, max_steps, paced, on_step, patience_s)
     result = DriveResult()
     # The next episode's link connects while the present one drives: the watchdogs allow no long pause in between.
     following = RigLink(rig, action_address)
@@ -308,6 +310,7 @@ class _Run:
         max_steps: int | None,
         paced: bool,
         on_step: Callable[[int], None] | None,
+        patience_s: float,
     ) -> None:
         self._period_s = rig.timing.period_s
         self._simulator = simulator
@@ -315,6 +318,7 @@ class _Run:
         self._limit = simulator.max_steps if max_steps is None else min(max_steps, simulator.max_steps)
         self._paced = paced
         self._on_step = on_step
+        self._patience_s = patience_s
         self.steps = 0
 
     @property
@@ -326,6 +330,7 @@ class _Run:
         """Drive one episode to its end, to the limit of steps, or until the rig stops asking."""
         episode = DrivenEpisode()
         observation = self._simulator.reset(1, seed=seed)[0].astype(np.float32)
+        self._await_armed(link, observation)
         pace = Pace(self._period_s, real_time=self._paced)
         while episode.steps < self._limit and not episode.over and not self.has_stopped:
             if self._faults.pause_at == self.steps:
@@ -340,6 +345,15 @@ class _Run:
             pace.wait(answered=episode.unanswered == unanswered)
         episode.outcomes = {name: float(values[0]) for name, values in self._simulator.outcomes().items()}
         return episode
+
+    def _await_armed(self, link: RigLink, observation: NDArray[np.float32]) -> None:
+        """Ask at the control rate, without moving, until the service is armed or patience ends."""
+        end_s = time.monotonic() + self._patience_s
+        while time.monotonic() < end_s:
+            answer = link.exchange(observation)
+            if answer.fresh and answer.mode == "armed":
+                return
+            time.sleep(self._period_s)
 
 
 def _drive_step(

@@ -50,6 +50,9 @@ def _parser() -> argparse.ArgumentParser:
     driving = verbs.choices["drive"]
     driving.add_argument("--action", default=_address("action"), help="the action lane (default: %(default)s)")
     driving.add_argument("--steps", type=int, help="most control periods per episode")
+    driving.add_argument(
+        "--patience", type=float, default=0.0, metavar="S", help="wait so long before an episode to be armed"
+    )
     driving.add_argument("--stop-after", type=int, metavar="STEP", help="fault: stop asking after this many steps")
     driving.add_argument("--pause-at", type=int, metavar="STEP", help="fault: say nothing for a while at this step")
     driving.add_argument("--pause-s", type=float, default=0.5, help="how long that while is (default: %(default)s)")
@@ -149,6 +152,7 @@ def _drive(options: argparse.Namespace, rig: Rig) -> None:
             pause_s=options.pause_s,
             alter=None if options.bias is None else bias(rig, options.bias, options.bias_from),
         ),
+        patience_s=options.patience,
     )  # fmt: skip
     tell("total", episodes=len(result.episodes), **figures(result.total()))
 

@@ -10,13 +10,14 @@ import json
 import sys
 import tempfile
 from pathlib import Path
-from typing import Any
+from typing import Any, cast
 
 from nearhand.client.demos import Delivery, DemonstrationStream
 from nearhand.client.desk import Desk
 from nearhand.client.options import add_deed_options, add_desk_options, open_desk, print_json, rig_text
 from nearhand.client.tryout.rig_process import RigProcess
 from nearhand.service.bus.desk_messages import GetRig, PutRig, RigReply, Where, WhereReply
+from nearhand.service.bus.intake_messages import Outcome
 from nearhand.service.errors import ConfigError, UnknownNameError
 from nearhand.service.rigs import Rig
 
@@ -112,7 +113,7 @@ def _imported(rig: Rig, options: argparse.Namespace, intake: str, spool: Path) -
             )
             for row, time_s in enumerate(episode.times_s):
                 recording.add(float(time_s), episode.observations[row], episode.actions[row])
-            recording.close(episode.outcome, episode.observations[-1], episode.terminated)
+            recording.close(cast(Outcome, episode.outcome), episode.observations[-1], episode.terminated)
         deliveries = stream.flush(DELIVERY_TIMEOUT_S)
     return [_row(name, delivery) for name, delivery in deliveries.items()]
 

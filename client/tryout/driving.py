@@ -5,12 +5,16 @@ from __future__ import annotations
 import threading
 from typing import Any
 
+from nearhand.client.desk import Desk
+from nearhand.client.tryout.judging import arm
 from nearhand.client.tryout.narrator import Narrator
 from nearhand.client.tryout.plan import Plan
 from nearhand.client.tryout.rig_process import RigProcess
 from nearhand.service.errors import LinkError
 
 STEPS_TIMEOUT_S = 30.0
+#: How long a rig waits before an episode for an operator to arm it.
+PATIENCE_S = 5.0
 #: Reasons that are limits doing their work, not trips.
 LIMITS = ("clipped", "slewed", "braked")
 
@@ -19,6 +23,7 @@ class Drive:
     """A rig process that drives in the background; a context manager that ends it.
 
     Attributes:
+        steps: control periods so far, told ten times a second.
         episodes: what it told of each finished episode.
         total: what it told at the end.
     """
@@ -26,11 +31,12 @@ class Drive:
     def __init__(self, plan: Plan, address: str, *, episodes: int, paced: bool, seed: int, steps: int | None) -> None:
         arguments = [
             "drive", "--rig", plan.rig_source, "--action", address, "--episodes", str(episodes), "--seed", str(seed),
+            "--patience", str(PATIENCE_S),
         ]  # fmt: skip
         arguments += ["--paced"] if paced else []
         arguments += ["--steps", str(steps)] if steps is not None else []
         self._process = RigProcess(arguments)
-        self._steps = 0
+        self.steps = 0
         self._moved = threading.Condition()
         self._failure: LinkError | None = None
         self.episodes: list[dict[str, Any]] = []
@@ -50,7 +56,7 @@ class Drive:
             for line in self._process.lines():
                 with self._moved:
                     if line["kind"] == "steps":
-                        self._steps = int(line["steps"])
+                        self.steps = int(line["steps"])
                     elif line["kind"] == "episode":
                         self.episodes.append(line)
                     else:
@@ -69,8 +75,8 @@ class Drive:
             LinkError: the process ended or stood still first.
         """
         with self._moved:
-            if not self._moved.wait_for(lambda: self._steps >= steps or bool(self.total), STEPS_TIMEOUT_S):
-                raise LinkError(f"the rig drove {self._steps} of {steps} control periods")
+            if not self._moved.wait_for(lambda: self.steps >= steps or bool(self.total), STEPS_TIMEOUT_S):
+                raise LinkError(f"the rig drove {self.steps} of {steps} control periods")
         if self._failure is not None:
             raise self._failure
 
@@ -94,33 +100,51 @@ class Drive:
         return self.total
 
 
-def drive_closed_loop(narrator: Narrator, plan: Plan, address: str) -> None:
-    """Drive the plan's episodes and tell score, interventions and round-trip times."""
+def drive_closed_loop(desk: Desk, narrator: Narrator, plan: Plan, address: str) -> None:
+    """Drive the plan's episodes and tell score, interventions, trips and round-trip times.
+
+    A trip ends the policy's part in its episode; an operator re-arms before the next one, and the number of trips is
+    held against what the confidence gate promises.
+    """
+    rearmed = 0
     with (
         Drive(plan, address, episodes=plan.driven_episodes, paced=False, seed=plan.drive_seed, steps=None) as drive,
         narrator.bar("drive", plan.driven_episodes) as advance,
     ):
         shown = 0
         while drive.await_line() or shown < len(drive.episodes):
-            for _ in range(len(drive.episodes) - shown):
+            for episode in drive.episodes[shown:]:
                 advance()
                 shown += 1
+                if episode["modes"].get("latched") and shown < plan.driven_episodes:
+                    arm(desk, plan, why="tryout: re-armed after a trip, before the next episode")
+                    rearmed += 1
         total = drive.finish(5.0)
-    steps = int(total["steps"])
-    modes, reasons = total["modes"], total["reasons"]
-    succeeded = sum(bool(episode["outcomes"].get("success")) for episode in drive.episodes)
-    limited = {name: count for name, count in reasons.items() if name in LIMITS}
-    narrator.check(
-        len(drive.episodes) == plan.driven_episodes, f"{len(drive.episodes)} episodes, {steps} periods driven"
-    )
+    _tell(narrator, plan, drive.episodes, total, rearmed)
+
+
+def _tell(narrator: Narrator, plan: Plan, episodes: list[dict[str, Any]], total: dict[str, Any], rearmed: int) -> None:
+    steps, count = int(total["steps"]), len(episodes)
+    reasons = total["reasons"]
+    succeeded = sum(bool(episode["outcomes"].get("success")) for episode in episodes)
+    tripped = sum(bool(episode["modes"].get("latched")) for episode in episodes)
+    novel = sum("novel" in episode["reasons"] for episode in episodes)
+    limited = {name: reasons[name] for name in LIMITS if name in reasons}
+    narrator.check(count == plan.driven_episodes, f"{count} episodes, {steps} control periods driven")
     narrator.check(int(total["unanswered"]) == 0, f"{total['unanswered']} queries unanswered")
-    narrator.check(modes.get("armed", 0) == steps, f"armed on {modes.get('armed', 0)} of {steps} periods")
-    narrator.say(f"{succeeded} of {len(drive.episodes)} episodes succeeded; score {total['score']:.4g} in all")
+    narrator.check(
+        2 * succeeded > count, f"{succeeded} of {count} episodes succeeded; score {total['score']:.4g} in all"
+    )
+    narrator.check(
+        tripped == novel and 4 * novel <= count,
+        f"{tripped} episodes tripped, {novel} of them at the confidence gate; re-armed {rearmed} times",
+    )
     trips_ms = total["round_trip_ms"]
     told = ", ".join(f"{name} {value:.2f} ms" for name, value in trips_ms.items() if value is not None)
-    narrator.say(f"interventions: {limited or 'none'}; round trip: {told}")
-    narrator.note("episodes", len(drive.episodes))
+    narrator.say(f"periods limited by the envelope: {limited or 'none'}; round trip: {told}")
+    narrator.note("episodes", count)
     narrator.note("succeeded", succeeded)
+    narrator.note("tripped", tripped)
     narrator.note("score", total["score"])
     narrator.note("reasons", reasons)
     narrator.note("round_trip_ms", trips_ms)

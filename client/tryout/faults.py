@@ -41,6 +41,8 @@ ACTION_SERVER = "nearhand.service.action.process"
 OVERFLOW_SD = 50.0
 #: How long the rig is driven around the kill.
 KILL_DRIVE_S = 4.0
+#: Control periods that may pass armed after the kill: a lease, and the pace of the rig process' own telling.
+MARGIN = 12
 
 
 def inject_all(desk: Desk, narrator: Narrator, plan: Plan, service: ServiceProcess) -> None:
@@ -246,13 +248,14 @@ def killed_server(desk: Desk, narrator: Narrator, plan: Plan, service: ServicePr
     with Drive(plan, service.lanes["action"], episodes=1, paced=True, seed=plan.drive_seed, steps=periods) as drive:
         drive.await_steps(25)
         killed = service.kill(ACTION_SERVER)
+        before = drive.steps
         killed_at_s = time.monotonic()
         service.await_restart(ACTION_SERVER, killed)
         narrator.say(f"the action server was killed and restarted within {time.monotonic() - killed_at_s:.2f} s")
         total = drive.finish(10 * KILL_DRIVE_S)
     armed, fallback = int(total["modes"].get("armed", 0)), int(total["fallback_steps"])
     narrator.check(fallback > 0, f"the rig-side link held the machine with its own fallback for {fallback} periods")
-    narrator.check(armed + fallback <= int(total["steps"]), f"{armed} periods armed before the kill, none after it")
+    narrator.check(armed <= before + MARGIN, f"armed for {armed} periods, until just after the kill, and not again")
     narrator.check(await_mode(desk, plan.rig.name, "latched"), "the service came back latched")
     state = arm(desk, plan, why="tryout: after the restart")
     narrator.check(state.mode == "armed" and state.version > 0, f"re-armed with version {state.version}")

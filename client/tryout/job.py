@@ -65,7 +65,7 @@ def run_tryout(rig_name: str, *, quick: bool, keep: Path | None, json_output: bo
                 narrator.step(6, "release", "try to release the bad one, then the good one")
                 refuse_and_release(desk, narrator, plan, versions)
                 narrator.step(7, "drive", "drive in closed loop, through the bus and the envelope")
-                drive_closed_loop(narrator, plan, service.lanes["action"])
+                drive_closed_loop(desk, narrator, plan, service.lanes["action"])
                 narrator.step(8, "faults", "inject faults")
                 inject_all(desk, narrator, plan, service)
                 narrator.step(9, "swap", "release a second version and roll back while queries run")
