@@ -64,7 +64,7 @@ Tell = Callable[[float, dict[str, float]], None]
 def residual_sd(actor_mean: Float32, actions: Float32, weights: Float32, floor: float) -> Float32:
     """Return the maximum-likelihood standard deviation per channel, (m,), never below ``floor``."""
     square = np.mean(weights[:, None] * np.square(actions - actor_mean, dtype=np.float64), axis=0)
-    return np.maximum(np.sqrt(square), floor).astype(np.float32)
+    return np.asarray(np.maximum(np.sqrt(square), floor), dtype=np.float32)
 
 
 def held_out_nll(actor: Actor, demonstrations: Sequence[Demonstration], floor: float) -> float:
@@ -88,7 +88,7 @@ def held_out_sd(actor: Actor, demonstrations: Sequence[Demonstration], floor: fl
     """Return the root mean square error per channel, (m,), each episode counting alike; never below ``floor``."""
     square = [np.square(item.actions - actor.mean(item.windows[:-1]), dtype=np.float64) for item in demonstrations]
     mean = np.mean([one.mean(axis=0) for one in square], axis=0)
-    return np.maximum(np.sqrt(mean), floor).astype(np.float32)
+    return np.asarray(np.maximum(np.sqrt(mean), floor), dtype=np.float32)
 
 
 def _fit(

@@ -35,6 +35,7 @@ from nearhand.service.learn.online import OnlineProximalPoint, Scene
 from nearhand.service.learn.progress import restore_progress, save_progress
 from nearhand.service.learn.rollouts import InProcess, RigSimulator, served
 from nearhand.service.learn.selection import Selector
+from nearhand.service.learn.starts import Wanted
 from nearhand.service.policy.format import PolicyFile, write_policy
 from nearhand.service.policy.network import Policy
 from nearhand.service.recipes import Recipe, recipe_from_map
@@ -291,6 +292,10 @@ def _online(
         make=lambda: simulator if isinstance(executor, InProcess) else make(),
         executor=executor,
         seed=recipe.seed,
+        wanted=Wanted(
+            shown=np.stack([item.observations[0] for item in lesson.train]).astype(np.float64),
+            weights=np.asarray([item.weight for item in lesson.train], dtype=np.float64),
+        ),
     )
     run = OnlineProximalPoint(scene, cloned.actor, recipe.online, past_action_noise=recipe.clone.past_action_noise)
     restore_progress(folder, run, lesson.identity)

@@ -30,7 +30,8 @@ def gaussian_kl_new_old(new_mean: Tensor, new_covariance: Tensor, old_mean: Tens
     trace = (torch.diagonal(new_covariance, dim1=-2, dim2=-1) / old_variance).sum(dim=-1)
     shift = ((new_mean - old_mean).square() / old_variance).sum(dim=-1)
     log_dets = torch.log(old_variance).sum(dim=-1) - torch.linalg.slogdet(new_covariance)[1]
-    return 0.5 * (trace + shift - new_mean.shape[-1] + log_dets)
+    divergence: Tensor = 0.5 * (trace + shift - new_mean.shape[-1] + log_dets)
+    return divergence
 
 
 def mean_shift_kl(new_mean: Tensor, old_mean: Tensor, old_variance: Tensor) -> float:

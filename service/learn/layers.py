@@ -46,7 +46,7 @@ class Layers:
 
     def matrices(self, flat: Tensor) -> list[tuple[Tensor, Tensor]]:
         """Return each layer's weight (inputs, outputs) and bias (outputs,) as views of the vector."""
-        pieces = torch.split(flat, self._splits)
+        pieces = torch.split(flat, list(self._splits))
         shapes = zip(self.widths[:-1], self.widths[1:], strict=True)
         return [(pieces[2 * i].view(a, b), pieces[2 * i + 1]) for i, (a, b) in enumerate(shapes)]
 

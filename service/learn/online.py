@@ -36,7 +36,7 @@ from nearhand.service.learn.objective import (
 )
 from nearhand.service.learn.rollouts import MakeSimulator, Rollouts, roll_out, served
 from nearhand.service.learn.sampling import draw_sample, mean_features
-from nearhand.service.learn.starts import balance
+from nearhand.service.learn.starts import Wanted, balance
 from nearhand.service.policy.network import Float32, Policy
 from nearhand.service.recipes import OnlineRecipe
 from nearhand.service.rigs import Rig
@@ -59,6 +59,7 @@ class Scene:
     make: MakeSimulator
     executor: Executor
     seed: int
+    wanted: Wanted
 
 
 def matched(scene: Scene, rollouts: Rollouts) -> Rollouts:
@@ -239,7 +240,7 @@ class OnlineProximalPoint:
         reference = Actor(self.clone.layers, state.actor.values.detach().clone(), state.log_sd)
         rollouts = roll_out(
             scene.executor, scene.make, scene.rig, served(scene.blank, reference), recipe.episodes, scene.horizon,
-            (scene.seed, 2, 2, state.iteration), noisy=True,
+            (scene.seed, 2, 2, state.iteration), noisy=True, wanted=scene.wanted,
         )  # fmt: skip
         rollouts = matched(scene, rollouts)
         means = mean_features(scene.features, rollouts, scene.discount)

@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 from nearhand.service.errors import LearningError
 from nearhand.service.learn.cloning import Actor
 from nearhand.service.learn.demonstrations import rest_action
+from nearhand.service.learn.starts import Wanted, nearest_seed
 from nearhand.service.policy.network import Float32, Policy, Window
 from nearhand.service.rigs import Rig
 from nearhand.service.simulators import Simulator, make_simulator
@@ -91,6 +92,7 @@ def drive(
     horizon: int,
     sim_seed: int,
     noise_seed: Sequence[int] | None,
+    wanted: Wanted | None = None,
 ) -> Rollouts:
     """Drive ``count`` episodes.
 
@@ -102,6 +104,7 @@ def drive(
         horizon: at most so many periods T.
         sim_seed: seed of start states and disturbances.
         noise_seed: seed of the action noise.
+        wanted: where to start; anywhere if None.
 
     Raises:
         LearningError: the simulator returned observations that are not finite.
@@ -121,6 +124,8 @@ def drive(
     alive = np.ones(count, dtype=bool)
     terminated = np.zeros(count, dtype=bool)
     window = Window(policy, count, rest)
+    if wanted is not None:
+        sim_seed = nearest_seed(simulator, count, sim_seed, wanted)
     windows[:, 0] = window.start(simulator.reset(count, seed=sim_seed))
     last = np.tile(rest.astype(np.float64), (count, 1))
     for t in range(horizon):
@@ -159,6 +164,7 @@ def roll_out(
     seed: Sequence[int],
     *,
     noisy: bool,
+    wanted: Wanted | None = None,
     parts: int = 1,
 ) -> Rollouts:
     """Drive ``count`` episodes in ``parts`` equal pieces of work; the result depends on ``parts``, not on who works.
@@ -168,6 +174,7 @@ def roll_out(
         make, rig, policy, count, horizon: see ``drive``.
         seed: root of all seeds of these roll-outs.
         noisy: explore with the policy's standard deviation.
+        wanted: where to start; anywhere if None.
         parts: pieces of work.
     """
     sizes = [len(piece) for piece in np.array_split(np.arange(count), parts)]
@@ -175,7 +182,7 @@ def roll_out(
     for index, size in enumerate(sizes):
         sim_seed = int(np.random.default_rng((*seed, index)).integers(2**31))
         noise_seed = (*seed, index, 1) if noisy else None
-        futures.append(executor.submit(drive, make, rig, policy, size, horizon, sim_seed, noise_seed))
+        futures.append(executor.submit(drive, make, rig, policy, size, horizon, sim_seed, noise_seed, wanted))
     try:
         pieces: list[Rollouts] = [future.result() for future in futures]
     finally:

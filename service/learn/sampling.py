@@ -44,11 +44,11 @@ def systematic(weights: Float64, count: int, generator: np.random.Generator) -> 
     """Return ``count`` indices drawn by systematic resampling. Source: Kitagawa 1996."""
     edges = np.cumsum(weights)
     points = (generator.random() + np.arange(count)) / count * edges[-1]
-    return np.minimum(np.searchsorted(edges, points), len(weights) - 1)
+    return np.asarray(np.minimum(np.searchsorted(edges, points), len(weights) - 1), dtype=np.int64)
 
 
-def mean_features(features: CostFeatures, rollouts: Rollouts, discount: float) -> tuple[Float64, Float64, Occupancy]:
-    """Return the roll-outs' mean features (k + 1,), the absorbing mass last, each episode's (B, k), and the weights."""
+def mean_features(features: CostFeatures, rollouts: Rollouts, discount: float) -> Float64:
+    """Return the roll-outs' mean features (k + 1,), the absorbing mass last."""
     count, periods = rollouts.asked.shape[:2]
     mass = occupancy(rollouts, discount)
     flat = features(

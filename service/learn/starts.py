@@ -1,16 +1,20 @@
 """Weights that make roll-outs start, on average, where the demonstrations started.
 
 A handful of demonstrations began at a handful of places. Their mean features differ from the roll-outs' for that reason
-alone, and a cost fitted to the difference would teach nothing about driving. Re-weighting whole roll-outs takes the
-start out of the comparison; the weights are the same in the start distribution and in the occupancy, so the flow
-constraint still holds.
+alone, and a cost fitted to the difference would teach nothing about driving. Choosing, among many sets of start states,
+one that is alike, and then re-weighting whole roll-outs, takes the start out of the comparison. The weights are the same
+in the start distribution and in the occupancy, so the flow constraint still holds.
 """
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 from numpy.typing import NDArray
 from scipy.special import logsumexp
+
+from nearhand.service.simulators import Simulator
 
 Float64 = NDArray[np.float64]
 #: Least effective share of the roll-outs; the match is softened until it is met.
@@ -19,11 +23,42 @@ NEWTON_STEPS = 50
 
 
 def _moments(starts: Float64) -> Float64:
-    return np.concatenate([starts, np.square(starts)], axis=1)
+    rows, columns = np.triu_indices(starts.shape[1])
+    return np.concatenate([starts, starts[:, rows] * starts[:, columns]], axis=1)
+
+
+def _gaps(starts: NDArray[np.floating], shown: NDArray[np.floating], weights: Float64) -> Float64:
+    """Return the moments (B, q) of the roll-outs' starts less the demonstrations' mean ones, in the latter's spread."""
+    centre = shown.mean(axis=0, dtype=np.float64)
+    spread = np.maximum(np.concatenate([starts, shown]).std(axis=0, dtype=np.float64), 1e-2)
+    target = np.average(_moments((shown - centre) / spread), axis=0, weights=weights)
+    return np.asarray(_moments((starts - centre) / spread) - target)
+
+
+@dataclass(frozen=True)
+class Wanted:
+    """Where roll-outs should start: the demonstrations' first observations (E, n), in the rig's units, weights (E,).
+
+    Of ``tries`` sets of start states that a simulator offers, the one with the nearest mean and mean products is used.
+    """
+
+    shown: NDArray[np.float64]
+    weights: Float64
+    tries: int = 64
+
+
+def nearest_seed(simulator: Simulator, count: int, seed: int, wanted: Wanted) -> int:
+    """Return the seed, of ``wanted.tries``, whose ``count`` starts are on average nearest to the wanted ones."""
+    seeds = [int(one) for one in np.random.default_rng(seed).integers(2**31, size=wanted.tries)]
+    sizes = [
+        float(np.square(_gaps(simulator.reset(count, seed=one), wanted.shown, wanted.weights).mean(axis=0)).sum())
+        for one in seeds
+    ]
+    return seeds[int(np.argmin(sizes))]
 
 
 def balance(starts: NDArray[np.floating], shown: NDArray[np.floating], weights: Float64) -> Float64:
-    """Return shares (B,) of the roll-outs, summing to one, that match the demonstrations' mean start and its square.
+    """Return shares (B,) of the roll-outs, summing to one, that match the demonstrations' mean start and mean products.
 
     The shares are the nearest to equal ones, in relative entropy, whose moments meet the target up to a ridge.
 
@@ -35,11 +70,7 @@ def balance(starts: NDArray[np.floating], shown: NDArray[np.floating], weights: 
     Source: entropy balancing (Hainmueller 2012; from memory); the dual solved by Newton's method.
     """
     count = len(starts)
-    spread = np.maximum(starts.std(axis=0, dtype=np.float64), 1e-2)
-    centre = starts.mean(axis=0, dtype=np.float64)
-    rows = _moments((starts - centre) / spread)
-    target = np.average(_moments((shown - centre) / spread), axis=0, weights=weights)
-    rows = rows - target
+    rows = _gaps(starts, shown, weights)
     ridge = 1e-3
     for _ in range(20):
         shares = _shares(rows, ridge)

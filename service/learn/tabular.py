@@ -96,7 +96,7 @@ def project_simplex(values: Float64, total: float = 1.0) -> Float64:
     ordered = np.sort(values)[::-1]
     sums = np.cumsum(ordered) - total
     last = np.nonzero(ordered * np.arange(1, len(values) + 1) > sums)[0][-1]
-    return np.maximum(values - sums[last] / (last + 1), 0.0)
+    return np.asarray(np.maximum(values - sums[last] / (last + 1), 0.0))
 
 
 def project_class(values: Float64, kind: CostClass) -> Float64:

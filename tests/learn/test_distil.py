@@ -26,8 +26,8 @@ from nearhand.service.policy.format import read_policy
 SMALL: dict[str, Any] = {
     "seed": 3,
     "clone": {"steps": 300, "hidden": [16, 16]},
-    "online": {"iterations": 4, "episodes": 6, "transitions": 400, "inner_steps": 8, "first_inner_steps": 8, "improvement_steps": 6,
-               "critic_hidden": [16]},
+    "online": {"iterations": 4, "episodes": 6, "transitions": 400, "inner_steps": 8, "first_inner_steps": 8,
+               "improvement_steps": 6, "critic_hidden": [16]},
     "offline": {"steps": 60, "transitions": 200},
     "selection": {"every": 2, "episodes": 6},
 }  # fmt: skip

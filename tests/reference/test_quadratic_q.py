@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 import pytest
 import torch
@@ -57,8 +59,8 @@ def test_value_is_q_plus_log_ratio_for_every_action(m: int, generator: np.random
     mean = torch.from_numpy(generator.normal(0, 1, (9, m)))
     variance = torch.from_numpy(generator.uniform(0.05, 1, m))
     new_mean, covariance = improved_gaussian(at, mean, variance, ALPHA)
-    old = torch.distributions.MultivariateNormal(mean, torch.diag(variance).expand(9, m, m))
-    new = torch.distributions.MultivariateNormal(new_mean, covariance)
+    old: Any = torch.distributions.MultivariateNormal(mean, torch.diag(variance).expand(9, m, m))
+    new: Any = torch.distributions.MultivariateNormal(new_mean, covariance)
     for _ in range(4):
         u = torch.from_numpy(generator.normal(0, 1.5, (9, m)))
         right = action_value(at, u) + (new.log_prob(u) - old.log_prob(u)) / ALPHA

@@ -110,7 +110,7 @@ def test_clone_of_the_soft_optimal_expert_finds_its_gain_and_spread() -> None:
         demonstrations.append(Demonstration(windows, np.asarray(actions, dtype=np.float32), 1.0, False))
     made = clone(demonstrations, CloneRecipe(steps=3000), 0, lambda done, figures: None, lambda: False)
     assert float(np.exp(made.actor.log_sd[0])) == pytest.approx(sd, rel=0.12)
-    states = generator.normal(0, 0.5, (200, 2)).astype(np.float32)
-    fitted = np.linalg.lstsq(states, -made.actor.mean(states), rcond=None)[0][:, 0]
+    probe = generator.normal(0, 0.5, (200, 2)).astype(np.float32)
+    fitted = np.linalg.lstsq(probe, -made.actor.mean(probe), rcond=None)[0][:, 0]
     # 640 samples of noise sd .138 over states of sd about .5: gain errors near .01, the network's bend a few more.
     np.testing.assert_allclose(fitted, K[0], atol=0.06)
