@@ -188,6 +188,9 @@ class RigLink:
 
     def _send(self, message: Message) -> bool:
         try:
+            # Asking whether there is room also makes the library notice room that it has not heard of yet.
+            if not self._socket.poll(0, zmq.POLLOUT):
+                return False
             self._socket.send(encode(message), flags=zmq.NOBLOCK)
         except zmq.ZMQError:
             return False

@@ -6,11 +6,14 @@ an operator arms again. Arming permits; nothing moves until the rig asks.
 
 from __future__ import annotations
 
+import math
 from collections import Counter, deque
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
+from nearhand.service.action.serving import History, Serving
 from nearhand.service.bus.action_messages import Mode, Reason, reason_names
 from nearhand.service.envelope.braking import Guards
 from nearhand.service.envelope.chain import Limited, limit
@@ -20,11 +23,9 @@ from nearhand.service.envelope.novelty import NoveltyScore
 from nearhand.service.envelope.watchdog import Watchdog
 from nearhand.service.errors import ConflictError, PolicyFormatError
 from nearhand.service.policy.format import PolicyFile
-from nearhand.service.policy.network import Policy
 from nearhand.service.rigs import Rig
 
-#: As far back as any policy can look.
-HISTORY = 17
+FORM, LATE = int(Reason.FORM), int(Reason.LATE)
 
 
 @dataclass(frozen=True, slots=True)
@@ -65,10 +66,10 @@ class Governor:
         self._barely_high = self._limits.high + self._limits.rounding
         self._file: PolicyFile | None = None
         self._novelty: NoveltyScore | None = None
-        self._window: Float32 = np.zeros(0, dtype=np.float32)
-        self._observed = np.zeros((HISTORY, self._n), dtype=np.float32)
-        self._acted = np.zeros((HISTORY, self._m), dtype=np.float32)
+        self._serving: Serving | None = None
+        self._observed, self._acted = History(self._n), History(self._m)
         self._fresh_history = True
+        self._epsilon = 1.0
         self._low_values: deque[bool] = deque(maxlen=rig.novelty.window_n)
         self._previous = self._limits.rest.copy()
         self._last_seq = -1
@@ -93,7 +94,7 @@ class Governor:
     @property
     def last_observation(self) -> Float32:
         """The last observation that was finite, (n,)."""
-        latest: Float32 = self._observed[0]
+        latest: Float32 = self._observed.newest(1)[0].copy()
         return latest
 
     def due_ns(self) -> int | None:
@@ -107,7 +108,7 @@ class Governor:
             PolicyFormatError: the file is for another rig or other channels; nothing changes.
         """
         if file is None:
-            self._file, self._novelty, self.version = None, None, 0
+            self._file, self._serving, self._novelty, self.version = None, None, None, 0
             self.mode, self.reasons = "empty", Reason.EMPTY
             return
         names = tuple(c.name for c in self.rig.observations), tuple(c.name for c in self.rig.actions)
@@ -129,7 +130,8 @@ class Governor:
                     f"{file.policy.input_size}"
                 )
         self._file, self._novelty, self.version = file, novelty, version
-        self._window = np.empty(file.policy.input_size, dtype=np.float32)
+        self._serving = Serving(file.policy)
+        self._epsilon = self.epsilon
         self._low_values.clear()
         if self.mode == "empty":
             self.mode, self.reasons = "latched", Reason.LATCHED | Reason.OPERATOR
@@ -194,33 +196,36 @@ class Governor:
             return Decision(self._previous, self.mode, self.version, int(self.reasons | Reason.OLD), self.novelty)
         self._last_seq = seq
         self.tick(now_ns)
-        flags = Reason.NONE
+        wrong = 0
         if self._watchdog.received(sent_ns, now_ns):
-            flags |= Reason.LATE
+            wrong |= LATE
         if applied is not None:
             self._take_over(applied)
-        seen = observation.shape == (self._n,) and bool(np.isfinite(observation).all())
+        values = observation.tolist() if observation.shape == (self._n,) else [math.nan]
+        seen = math.isfinite(sum(values))
         if seen:
-            self._remember(observation, now_ns)
+            self._remember(observation, values, now_ns)
         else:
-            flags |= Reason.FORM
+            wrong |= FORM
         self._guards.note(self._previous)
-        if flags and self.mode == "armed":
-            self.latch(flags)
+        if wrong and self.mode == "armed":
+            self.latch(Reason(wrong))
         proposed = None
         self.novelty = 1.0
-        if seen and self._file is not None:
+        if seen and self._serving is not None:
             with np.errstate(over="ignore", invalid="ignore"):
-                proposed = self._propose(self._file.policy)
+                proposed = self._propose(self._serving)
+        changed = 0
         if proposed is not None and self.mode == "armed":
-            limited = limit(self._limits, proposed, self._previous, observation, self._guards)
-            flags |= self._flags(limited)
+            limited = limit(self._limits, proposed, self._previous, values, self._guards)
+            if limited.clipped or limited.slewed or limited.braked:
+                changed = self._intervened(limited)
             action = limited.action
         else:
             action = self._fallback.act(self._previous, now_ns)
             self.counts["fallback"] += 1
         self._previous = action
-        return Decision(action, self.mode, self.version, int(self.reasons | flags), self.novelty)
+        return Decision(action, self.mode, self.version, int(self.reasons) | wrong | changed, self.novelty)
 
     def _take_over(self, applied: Float32) -> None:
         """Take ``applied`` for the action in force, if it is one."""
@@ -231,56 +236,46 @@ class Governor:
         else:
             self.counts["applied_unusable"] += 1
 
-    def _remember(self, observation: Float32, now_ns: int) -> None:
-        """Shift the history by one: row 0 is the present observation, and the action that led to it."""
+    def _remember(self, observation: Float32, values: Sequence[float], now_ns: int) -> None:
+        """Take in a finite observation, also given as plain numbers, and the action that led to it."""
         if self._fresh_history:
-            self._observed[:] = observation
-            self._acted[:] = self._previous
+            self._observed.fill(observation)
+            self._acted.fill(self._previous)
             self._guards.restart(self._previous)
             self._fresh_history = False
         else:
-            self._observed[1:] = self._observed[:-1]
-            self._observed[0] = observation
-            self._acted[1:] = self._acted[:-1]
-            self._acted[0] = self._previous
-        self._fallback.see(observation, now_ns)
+            self._observed.push(observation)
+            self._acted.push(self._previous)
+        self._fallback.see(values, now_ns)
 
-    def _propose(self, policy: Policy) -> Float32 | None:
+    def _propose(self, serving: Serving) -> Float32 | None:
         """Return the policy's action (m,) if it is finite; look at the novelty on the way."""
-        split = self._n * (1 + policy.past_observations)
-        rows = self._observed[: 1 + policy.past_observations]
-        np.divide(
-            rows - policy.observation_mean, policy.observation_scale, out=self._window[:split].reshape(rows.shape)
-        )
-        if policy.past_actions:
-            done = self._acted[: policy.past_actions]
-            self._window[split:] = ((done - policy.action_middle) / policy.action_half).reshape(-1)
-        self._judge_novelty()
-        action = policy.action(self._window)
-        if np.isfinite(action).all():
-            return action
-        if self.mode == "armed":
+        serving.look(self._observed, self._acted)
+        self._judge_novelty(serving.window)
+        action = serving.propose()
+        if action is None and self.mode == "armed":
             self.latch(Reason.OUTPUT)
-        return None
+        return action
 
-    def _judge_novelty(self) -> None:
-        if self._novelty is None or self._novelty.smallest_epsilon >= 1.0:
+    def _judge_novelty(self, window: Float32) -> None:
+        if self._novelty is None or self._epsilon >= 1.0:
             return
-        self.novelty = self._novelty.p_value(self._window)
-        self._low_values.append(self.novelty <= self.epsilon)
+        self.novelty = self._novelty.p_value_bare(window)
+        self._low_values.append(self.novelty <= self._epsilon)
         if sum(self._low_values) >= self.rig.novelty.trip_m:
             self.counts["novel"] += 1
             if self._gate_trips and self.mode == "armed":
                 self.latch(Reason.NOVEL)
 
-    def _flags(self, limited: Limited) -> Reason:
-        flags = Reason.NONE
-        if limited.clipped or limited.slewed or limited.braked:
-            for changed, reason in (
-                (limited.clipped, Reason.CLIPPED), (limited.slewed, Reason.SLEWED), (limited.braked, Reason.BRAKED),
-            ):  # fmt: skip
-                if changed:
-                    flags |= reason
-                    self.counts[str(reason.name).lower()] += 1
-            self.counts["interventions"] += 1
+    def _intervened(self, limited: Limited) -> int:
+        flags = 0
+        for changed, reason in (
+            (limited.clipped, Reason.CLIPPED),
+            (limited.slewed, Reason.SLEWED),
+            (limited.braked, Reason.BRAKED),
+        ):
+            if changed:
+                flags |= int(reason)
+                self.counts[str(reason.name).lower()] += 1
+        self.counts["interventions"] += 1
         return flags

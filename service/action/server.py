@@ -7,21 +7,24 @@ from __future__ import annotations
 
 import contextlib
 from collections import Counter
+from collections.abc import Callable
 from typing import Any
 
+import msgpack
 import zmq
+from pydantic import ValidationError
 
 from nearhand.service.action.control import Control
 from nearhand.service.action.driven_rig import DrivenRig
 from nearhand.service.action.records import Occurrences
-from nearhand.service.bus.action_messages import ACTION_REQUESTS, Act, Action, Hello
-from nearhand.service.bus.arrays import pack
+from nearhand.service.bus.action_messages import ACTION_REQUESTS, Act, Hello
+from nearhand.service.bus.arrays import WIRE_DTYPE
 from nearhand.service.bus.codec import decode_map, encode, from_map
 from nearhand.service.bus.control_messages import CONTROL_REQUESTS
-from nearhand.service.bus.message import ErrorReply, Message
+from nearhand.service.bus.message import PROTOCOL_VERSION, ErrorReply
 from nearhand.service.bus.sockets import ACTION_QUEUE, BULK_QUEUE, bind, make_socket
 from nearhand.service.clock import Clock
-from nearhand.service.errors import NearhandError, UnknownNameError
+from nearhand.service.errors import NearhandError, UnknownNameError, WireError
 from nearhand.service.process import StopSignal
 
 #: Queries taken in a row before the control socket and the watchdogs get their turn.
@@ -48,9 +51,12 @@ class ActionServer:
         self._clock = clock
         self._rigs: dict[str, DrivenRig] = {}
         self._occurrences = Occurrences()
+        self._packer = msgpack.Packer(use_bin_type=True)
         self.counters: Counter[str] = Counter()
         self._control_room = Control(self._rigs, self._occurrences, self.counters, clock, instance)
         self._action = make_socket(context, zmq.ROUTER, queue=ACTION_QUEUE, role="bind")
+        # The library hears about once a millisecond that replies have left: a short queue would drop the next ones.
+        self._action.setsockopt(zmq.SNDHWM, BULK_QUEUE)
         self.address = bind(self._action, action)
         self._control = make_socket(context, zmq.ROUTER, queue=BULK_QUEUE, role="bind")
         bind(self._control, control)
@@ -75,6 +81,8 @@ class ActionServer:
             now_ns = self._clock.now_ns()
             for driven in self._rigs.values():
                 driven.governor.tick(now_ns)
+                if driven.governor.trips:
+                    self._control_room.collect_trips()
 
     def _patience_ms(self) -> int:
         """Return how long to sleep: until the next watchdog may have to act."""
@@ -84,7 +92,7 @@ class ActionServer:
         return min(max((min(dues) - self._clock.now_ns()) // 1_000_000, 0) + 1, IDLE_MS)
 
     @staticmethod
-    def _serve(socket: Socket, answer: Any, most: int) -> None:
+    def _serve(socket: Socket, answer: Callable[[bytes], bytes], most: int) -> None:
         for _ in range(most):
             try:
                 parts = socket.recv_multipart(flags=zmq.NOBLOCK)
@@ -94,36 +102,39 @@ class ActionServer:
             reply = answer(parts[head] if len(parts) == head + 1 else b"")
             # A peer that does not read its replies must not hold up the others.
             with contextlib.suppress(zmq.ZMQError):
-                socket.send_multipart([*parts[:head], encode(reply)], flags=zmq.NOBLOCK)
+                socket.send_multipart([*parts[:head], reply], flags=zmq.NOBLOCK)
 
-    def _answer(self, frame: bytes) -> Message:
+    def _answer(self, frame: bytes) -> bytes:
         table: dict[str, Any] = {}
         try:
             table = decode_map(frame)
             message = from_map(table, ACTION_REQUESTS)
             if isinstance(message, Act):
                 return self._act(message)
-            assert isinstance(message, Hello)
+            if not isinstance(message, Hello):
+                raise WireError(f"{message.kind} is no request of this lane", code="wire.kind")
             welcome = self._driven(message.rig).hello(message)
             self._occurrences.note(message.rig, "session", {"session": message.session})
-            return welcome
+            return encode(welcome)
         except NearhandError as error:
             self.counters["action_errors"] += 1
-            seq = table.get("seq")
-            known = isinstance(seq, int) and not isinstance(seq, bool) and 0 <= seq < 2**63
-            return ErrorReply(code=error.code, message=error.message[:2000], seq=seq if known else None)
+            return encode(ErrorReply(code=error.code, message=error.message[:2000], seq=_count(table.get("seq"))))
         except Exception as error:
+            # A defect of ours must not silence the lane: the rig's link falls back on an error as on silence.
             self.counters["action_defects"] += 1
-            return ErrorReply(code="error.internal", message=f"an internal error: {type(error).__name__}")
+            text = f"an internal error: {type(error).__name__}"
+            return encode(ErrorReply(code="error.internal", message=text, seq=_count(table.get("seq"))))
 
-    def _act(self, message: Act) -> Action:
+    def _act(self, message: Act) -> bytes:
         driven = self._driven(message.rig)
         decision = driven.act(message)
-        return Action.model_construct(
-            v=1, kind="action", seq=message.seq, sent_ns=message.sent_ns, action=pack(decision.action),
-            mode=decision.mode, version=decision.version, lease_s=driven.rig.timing.lease_s,
-            reasons=decision.reasons, novelty=float(decision.novelty),
-        )  # fmt: skip
+        reply = {
+            "v": PROTOCOL_VERSION, "kind": "action", "seq": message.seq, "sent_ns": message.sent_ns,
+            "action": decision.action.astype(WIRE_DTYPE, copy=False).tobytes(), "mode": decision.mode,
+            "version": decision.version, "lease_s": driven.rig.timing.lease_s, "reasons": decision.reasons,
+            "novelty": decision.novelty,
+        }  # fmt: skip
+        return bytes(self._packer.pack(reply))
 
     def _driven(self, rig: str) -> DrivenRig:
         if rig not in self._rigs:
@@ -132,16 +143,26 @@ class ActionServer:
             )
         return self._rigs[rig]
 
-    def _carry_out(self, frame: bytes) -> Message:
+    def _carry_out(self, frame: bytes) -> bytes:
         table: dict[str, Any] = {}
         try:
             table = decode_map(frame)
-            reply = self._control_room.do(from_map(table, CONTROL_REQUESTS))
-            self._control_room.collect_trips()
-            return reply
+            return encode(self._control_room.do(from_map(table, CONTROL_REQUESTS)))
         except NearhandError as error:
             self.counters["control_errors"] += 1
-            request = table.get("request")
-            return ErrorReply(
-                code=error.code, message=error.message[:2000], request=request if isinstance(request, str) else None
-            )
+            return _control_error(error.code, error.message, table)
+        except Exception as error:
+            self.counters["control_defects"] += 1
+            return _control_error("error.internal", f"an internal error: {error!r}", table)
+
+
+def _count(value: object) -> int | None:
+    """Return the value if it can be a message's count."""
+    return value if type(value) is int and 0 <= value < 2**63 else None
+
+
+def _control_error(code: str, message: str, table: dict[str, Any]) -> bytes:
+    try:
+        return encode(ErrorReply(code=code, message=message[:2000], request=table.get("request")))
+    except ValidationError:
+        return encode(ErrorReply(code=code, message=message[:2000]))

@@ -21,7 +21,7 @@ from __future__ import annotations
 import math
 from collections import deque
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
@@ -62,6 +62,9 @@ class Brake:
         hold_s: how long an action may be held without a new one.
         period_s: length of each pending action.
         easing_s: see :func:`easing_s`; 0 for none.
+        most_pending: how many actions may be pending.
+        margin: how much farther than v²/(2d) easing out carries the axis, at most: d·τ²/2.
+        ahead_s, gain, half_per_deceleration: how long the highest action may go on, the speed that it brings, 1/(2d).
     """
 
     accelerates: bool
@@ -70,12 +73,28 @@ class Brake:
     ramp_per_s: float
     hold_s: float
     period_s: float
-    easing_s: float
+    easing_s: float = 0.0
+    most_pending: int = 0
+    margin: float = field(init=False)
+    ahead_s: float = field(init=False)
+    gain: float = field(init=False)
+    half_per_deceleration: float = field(init=False)
 
-    @property
-    def margin(self) -> float:
-        """How much farther than v²/(2d) easing out carries the axis, at most: d·τ²/2."""
-        return self.deceleration * self.easing_s * self.easing_s / 2.0
+    def __post_init__(self) -> None:
+        ahead_s, strongest, d = (
+            self.hold_s + self.most_pending * self.period_s,
+            max(self.strongest, 0.0),
+            self.deceleration,
+        )
+        if self.accelerates:
+            ahead_s += (strongest + d) / self.ramp_per_s
+            gain = strongest * ahead_s
+        else:
+            gain, d = strongest, min(d, self.ramp_per_s)
+        object.__setattr__(self, "margin", self.deceleration * self.easing_s * self.easing_s / 2.0)
+        object.__setattr__(self, "ahead_s", ahead_s)
+        object.__setattr__(self, "gain", gain)
+        object.__setattr__(self, "half_per_deceleration", 0.5 / d)
 
     def furthest(self, speed: float, action: float, pending: Sequence[float] = ()) -> float:
         """Return how far the axis may come from here.
@@ -127,13 +146,10 @@ class Brake:
         """Return ``wanted``, lowered as far as the room needs it, but not below ``floor``.
 
         Args:
-            room: distance left to the limit.
+            room: distance left to the limit, less the margin.
             floor: what brings the axis to standstill.
         """
-        room -= self.margin
-        if wanted <= floor or self._is_far(room, speed, len(pending)):
-            return wanted
-        if self.furthest(speed, wanted, pending) <= room:
+        if wanted <= floor or self.furthest(speed, wanted, pending) <= room:
             return wanted
         if not self.furthest(speed, floor, pending) <= room:
             return floor
@@ -146,16 +162,13 @@ class Brake:
                 bad = middle
         return good
 
-    def _is_far(self, room: float, speed: float, periods: int) -> bool:
+    def is_far(self, room: float, speed: float) -> bool:
         """Tell, quickly, whether even the highest action all along would not use up the room."""
-        time_s = self.hold_s + periods * self.period_s
-        if not self.accelerates:
-            d = min(self.deceleration, self.ramp_per_s)
-            top = max(self.strongest, speed, 0.0)
-            return top * (time_s + top / (2.0 * d)) <= room
-        time_s += (self.strongest + self.deceleration) / self.ramp_per_s
-        top = max(speed, 0.0) + max(self.strongest, 0.0) * time_s
-        return top * (time_s + top / (2.0 * self.deceleration)) <= room
+        if self.accelerates:
+            top = (speed if speed > 0.0 else 0.0) + self.gain
+        else:
+            top = speed if speed > self.gain else self.gain
+        return top * (self.ahead_s + top * self.half_per_deceleration) <= room
 
 
 class AxisGuard:
@@ -175,12 +188,14 @@ class AxisGuard:
         hold_s = limits.lease_s + limits.period_s + limits.hold_s
         eased = easing_s(axis, limits.period_s) if axis.accelerates else 0.0
 
+        pending = 1 + math.ceil(axis.reaction_s / limits.period_s - 1e-9)
+
         def brake(strongest: float, weakest: float) -> Brake:
             reach = min(axis.deceleration, max(-weakest, 1e-9)) if axis.accelerates else axis.deceleration
-            return Brake(axis.accelerates, strongest, reach, ramp_per_s, hold_s, limits.period_s, eased)
+            return Brake(axis.accelerates, strongest, reach, ramp_per_s, hold_s, limits.period_s, eased, pending)
 
         self._up, self._down = brake(high, low), brake(-low, -high)
-        self._recent: deque[float] = deque(maxlen=1 + math.ceil(axis.reaction_s / limits.period_s - 1e-9))
+        self._recent: deque[float] = deque(maxlen=pending)
 
     def restart(self, action: float) -> None:
         """Forget the past: the drive has long been following ``action``."""
@@ -196,8 +211,11 @@ class AxisGuard:
         Args:
             position, velocity: as observed, in the axis' units.
         """
+        up_room = self.axis.high - position - self._up.margin
+        down_room = position - self.axis.low - self._down.margin
+        if self._up.is_far(up_room, velocity) and self._down.is_far(down_room, -velocity):
+            return wanted
         still = towards_standstill(self.axis, velocity, self._period_s)
-        up_room, down_room = self.axis.high - position, position - self.axis.low
         up_pending, down_pending = _bounds(self._recent), _bounds([-one for one in self._recent])
         lowered = self._up.highest(up_room, velocity, wanted, still, up_pending)
         raised = -self._down.highest(down_room, -velocity, -lowered, -still, down_pending)
@@ -241,7 +259,7 @@ class Guards:
         for guard in self._guards:
             guard.note(float(action[guard.axis.action]))
 
-    def keep(self, action: Float32, observation: NDArray[np.floating]) -> bool:
+    def keep(self, action: Float32, observation: Sequence[float] | NDArray[np.floating]) -> bool:
         """Change ``action`` (m,) in place where braking asks for it; tell whether it did.
 
         Args:

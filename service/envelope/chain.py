@@ -6,6 +6,7 @@ action towards what it allows as fast as slew lets it; it looks ahead by the tim
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -29,7 +30,7 @@ def limit(
     limits: Limits,
     proposed: Float32,
     previous: Float32,
-    observation: NDArray[np.floating] | None,
+    observation: Sequence[float] | NDArray[np.floating] | None,
     guards: Guards | None = None,
 ) -> Limited:
     """Apply magnitude, slew and braking to a finite proposal.
@@ -43,14 +44,17 @@ def limit(
     Returns:
         The action: inside the range, and at most one slew step from ``previous``.
     """
-    inside = np.minimum(np.maximum(proposed, limits.low), limits.high)
-    action = slew(limits, inside, previous)
-    clipped = bool((np.abs(inside - proposed) > limits.rounding).any())
-    slewed = bool((np.abs(action - inside) > limits.rounding).any())
-    braked = False
+    low = np.maximum(limits.low, previous - limits.slew_step)
+    high = np.minimum(limits.high, previous + limits.slew_step)
+    action = np.minimum(np.maximum(proposed, low), high)
+    clipped = slewed = braked = False
+    if (action != proposed).any():
+        inside = np.minimum(np.maximum(proposed, limits.low), limits.high)
+        clipped = bool((np.abs(inside - proposed) > limits.rounding).any())
+        slewed = bool((np.abs(action - inside) > limits.rounding).any())
     if limits.axes and guards is not None and observation is not None and guards.keep(action, observation):
         braked = True
-        action = slew(limits, action, previous)
+        action = np.minimum(np.maximum(action, low), high)
     return Limited(action, clipped, slewed, braked)
 
 

@@ -6,6 +6,8 @@ is an acceleration, rest is standstill, not the action zero: the fallback decele
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -34,7 +36,7 @@ class FallbackAction:
         self._speeds_ns: int | None = None
         self._since_ns: int | None = None
 
-    def see(self, observation: NDArray[np.floating], now_ns: int) -> None:
+    def see(self, observation: Sequence[float] | NDArray[np.floating], now_ns: int) -> None:
         """Note the axes' speeds from a finite observation (n,)."""
         self._speeds_ns = now_ns
         for index, axis in enumerate(self._limits.axes):

@@ -84,14 +84,21 @@ class NoveltyScore:
     def score(self, window: Float32) -> float:
         """Return the distance of a window (d,); infinite if it is not finite."""
         with np.errstate(over="ignore", invalid="ignore"):
-            gap = self._whitening @ (window - self._centre)
-            squared = float(gap @ gap)
-        # Rounded as the maxima are, so that equals compare as equals.
-        return float(np.float32(math.sqrt(squared))) if math.isfinite(squared) else math.inf
+            return self._distance(window)
 
     def p_value(self, window: Float32) -> float:
         """Return (1 + number of calibration episodes whose maximum is at least the score) / (n + 1)."""
         return self.p_of(self.score(window))
+
+    def p_value_bare(self, window: Float32) -> float:
+        """Return the p-value where the caller has silenced NumPy's overflow warnings already."""
+        return self.p_of(self._distance(window))
+
+    def _distance(self, window: Float32) -> float:
+        gap = self._whitening @ (window - self._centre)
+        squared = float(gap @ gap)
+        # Rounded as the maxima are, so that equals compare as equals.
+        return float(np.float32(math.sqrt(squared))) if math.isfinite(squared) else math.inf
 
     def p_of(self, score: float) -> float:
         """Return the p-value of a score."""

@@ -1,0 +1,267 @@
+"""How long one query takes, beside a bare echo of the same bytes over the same transport in the same run.
+
+Both servers are processes of their own; both are asked by the same kind of client, alternately, so that whatever else
+the machine does meets both alike. What is measured is from sending a ready frame to having the reply's frame.
+"""
+
+from __future__ import annotations
+
+import os
+import signal
+import subprocess
+import sys
+import tempfile
+import time
+from collections.abc import Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import zmq
+from numpy.typing import NDArray
+
+from nearhand.service.bus.action_messages import ACTION_REPLIES, Act, Action, Hello, Welcome
+from nearhand.service.bus.arrays import pack
+from nearhand.service.bus.codec import decode, encode
+from nearhand.service.bus.control_messages import CONTROL_REPLIES, Arm, ControlReply, Load
+from nearhand.service.bus.message import Message
+from nearhand.service.bus.sockets import ACTION_QUEUE, BULK_QUEUE, connect, make_socket
+from nearhand.service.config import ServiceSettings
+from nearhand.service.envelope.novelty import calibrate
+from nearhand.service.errors import LinkError
+from nearhand.service.rigs import Rig
+
+OBSERVATIONS, ACTIONS, HIDDEN = 24, 6, 128
+QUERIES = 6_000
+WARM_UP = 300
+#: Queries to one server before the other has its turn.
+TURN = 25
+GOALS = {"p50 ratio": 1.5, "p99 ratio": 1.5}
+REPLY_TIMEOUT_MS = 5_000
+
+#: The echo: nothing but the transport.
+ECHO = """
+import sys, zmq
+socket = zmq.Context().socket(zmq.ROUTER)
+socket.setsockopt(zmq.LINGER, 0)
+socket.bind("tcp://127.0.0.1:*")
+print(socket.getsockopt_string(zmq.LAST_ENDPOINT).rstrip(chr(0)), flush=True)
+while True:
+    socket.send_multipart(socket.recv_multipart())
+"""
+
+Socket = zmq.Socket[bytes]
+
+
+def bench_rig() -> Rig:
+    """Return the rig that is measured: 24 observations, 6 actions, two braking axes."""
+    axes = [("o0", "o1", "a0", "acceleration"), ("o2", "o3", "a1", "velocity")]
+    return Rig.model_validate(
+        {
+            "name": "bench",
+            "title": "24 observations, 6 actions",
+            "observations": [{"name": f"o{k}", "unit": "", "low": -5.0, "high": 5.0} for k in range(OBSERVATIONS)],
+            "actions": [
+                {"name": f"a{k}", "unit": "", "low": -1.0, "high": 1.0, "slew_per_s": 20.0} for k in range(ACTIONS)
+            ],
+            "timing": {"period_s": 0.02, "deadline_s": 5.0, "lease_s": 0.06},
+            "braking": [
+                {
+                    "position": position, "velocity": velocity, "action": action, "drives": drives,
+                    "low": -50.0, "high": 50.0, "deceleration": 0.8,
+                }
+                for position, velocity, action, drives in axes
+            ],
+        }
+    )  # fmt: skip
+
+
+def bench_policy(rig: Rig) -> bytes:
+    """Return a policy file of random weights with a calibrated confidence gate."""
+    from nearhand.service.policy.format import PolicyFile, write_policy
+    from nearhand.service.policy.network import Policy
+
+    generator = np.random.default_rng(7)
+
+    def draw(*shape: int) -> NDArray[np.float32]:
+        return np.asarray(0.1 * generator.standard_normal(shape), dtype=np.float32)
+
+    policy = Policy(
+        weights=(draw(OBSERVATIONS, HIDDEN), draw(HIDDEN, HIDDEN), draw(HIDDEN, ACTIONS)),
+        biases=(draw(HIDDEN), draw(HIDDEN), draw(ACTIONS)),
+        observation_mean=np.zeros(OBSERVATIONS, dtype=np.float32),
+        observation_scale=np.ones(OBSERVATIONS, dtype=np.float32),
+        action_middle=np.zeros(ACTIONS, dtype=np.float32),
+        action_half=np.ones(ACTIONS, dtype=np.float32),
+        log_sd=np.zeros(ACTIONS, dtype=np.float32),
+    )
+    reference = generator.standard_normal((1000, OBSERVATIONS)).astype(np.float32)
+    episodes = [3 * generator.standard_normal((20, OBSERVATIONS)).astype(np.float32) for _ in range(20)]
+    names = tuple(c.name for c in rig.observations), tuple(c.name for c in rig.actions)
+    return write_policy(PolicyFile(policy, rig.name, *names, "clone", calibrate(reference, episodes), {}))
+
+
+@contextmanager
+def _process(words: list[str], **options: Any) -> Iterator[subprocess.Popen[str]]:
+    """Run a child with single-threaded numerics; end it afterwards."""
+    environment = {**os.environ, "OMP_NUM_THREADS": "1", "OPENBLAS_NUM_THREADS": "1"}
+    process = subprocess.Popen([sys.executable, *words], env=environment, text=True, **options)
+    try:
+        yield process
+    finally:
+        process.send_signal(signal.SIGTERM)
+        try:
+            process.wait(5.0)
+        except subprocess.TimeoutExpired:
+            process.kill()
+            process.wait()
+        if process.stdout is not None:
+            process.stdout.close()
+
+
+@contextmanager
+def _echo() -> Iterator[str]:
+    with _process(["-c", ECHO], stdout=subprocess.PIPE) as process:
+        assert process.stdout is not None
+        address = process.stdout.readline().strip()
+        if not address:
+            raise LinkError("the echo did not start")
+        yield address
+
+
+@contextmanager
+def _action_server(context: zmq.Context[Socket], folder: Path, rig: Rig) -> Iterator[str]:
+    """Run an action server with the rig's policy loaded and armed; yield its address."""
+    probe = context.socket(zmq.ROUTER)
+    probe.bind("tcp://127.0.0.1:*")
+    address = probe.getsockopt_string(zmq.LAST_ENDPOINT).rstrip("\x00")
+    probe.close(linger=0)
+    unused = f"ipc://{folder / 'unused.ipc'}"
+    settings = ServiceSettings(
+        data=folder, action=address, intake=unused, desk=unused, feed=unused,
+        control=f"ipc://{folder / 'control.ipc'}", progress=unused,
+    )  # fmt: skip
+    path = folder / "settings.json"
+    path.write_text(settings.model_dump_json(), encoding="utf-8")
+    read, write = os.pipe()
+    words = ["-m", "nearhand.service.action.process", "--settings", str(path), "--ready-fd", str(write)]
+    with _process([*words, "--parent", str(os.getpid())], pass_fds=[write]):
+        os.close(write)
+        ready = os.read(read, 16)
+        os.close(read)
+        if not ready:
+            raise LinkError("the action server did not start; its log above says why")
+        from nearhand.service.policy.format import sha256
+
+        data = bench_policy(rig)
+        description = rig.model_dump(mode="json")
+        requests: tuple[Message, ...] = (
+            Load(request="1", rig=rig.name, description=description, version=1, sha256=sha256(data), policy=data),
+            Arm(request="2", rig=rig.name, who="bench", why="measuring"),
+        )
+        control = make_socket(context, zmq.DEALER, queue=BULK_QUEUE, role="connect")
+        try:
+            connect(control, settings.control)
+            for request in requests:
+                control.send(encode(request))
+                reply = decode(control.recv(), CONTROL_REPLIES) if control.poll(REPLY_TIMEOUT_MS) else None
+                if not isinstance(reply, ControlReply):
+                    raise LinkError(f"the action server did not accept {request.kind}: {reply!r}")
+        finally:
+            control.close(linger=0)
+        yield address
+
+
+def _frames(rig: Rig) -> list[bytes]:
+    """Return the queries, ready to send."""
+    generator = np.random.default_rng(1)
+    rows = generator.standard_normal((256, OBSERVATIONS)).astype(np.float32)
+    return [
+        encode(
+            Act(
+                rig=rig.name, session="bench", seq=seq, sent_ns=time.monotonic_ns(), obs=pack(rows[seq % len(rows)]),
+                applied=None,
+            )
+        )
+        for seq in range(1, WARM_UP + QUERIES + 1)
+    ]  # fmt: skip
+
+
+def _ask(socket: Socket, frame: bytes) -> tuple[bytes, int]:
+    """Return the reply and how long it took, ns."""
+    begin_ns = time.perf_counter_ns()
+    socket.send(frame)
+    reply = socket.recv()
+    return reply, time.perf_counter_ns() - begin_ns
+
+
+def _client(context: zmq.Context[Socket], address: str) -> Socket:
+    socket = make_socket(context, zmq.REQ, queue=ACTION_QUEUE, role="connect")
+    socket.setsockopt(zmq.RCVTIMEO, REPLY_TIMEOUT_MS)
+    connect(socket, address)
+    return socket
+
+
+def run() -> dict[str, Any]:
+    """Measure; return bench, figures (µs), ratios and targets.
+
+    Raises:
+        LinkError: a server did not start, or a query was not answered by the armed policy.
+    """
+    rig = bench_rig()
+    context: zmq.Context[Socket] = zmq.Context()
+    times: dict[str, list[int]] = {"action": [], "echo": []}
+    try:
+        with (
+            tempfile.TemporaryDirectory(prefix="nearhand-") as folder,
+            _echo() as echo_address,
+            _action_server(context, Path(folder), rig) as action_address,
+        ):
+            sockets = {"action": _client(context, action_address), "echo": _client(context, echo_address)}
+            replies = _measure(rig, sockets, times)
+    except zmq.Again as error:
+        raise LinkError(f"no reply within {REPLY_TIMEOUT_MS} ms") from error
+    finally:
+        context.destroy(linger=0)
+    _check(replies)
+    figures = {
+        f"{name} {label} (µs)": float(np.percentile(times[name], percent)) / 1e3
+        for name in ("action", "echo")
+        for label, percent in (("p50", 50), ("p90", 90), ("p99", 99))
+    }
+    ratios = {
+        f"{label} ratio": figures[f"action {label} (µs)"] / figures[f"echo {label} (µs)"] for label in ("p50", "p99")
+    }
+    targets = {name: {"value": ratios[name], "goal": goal, "met": ratios[name] <= goal} for name, goal in GOALS.items()}
+    return {"bench": "action-latency", "figures": figures, "ratios": ratios, "targets": targets, "queries": QUERIES}
+
+
+def _measure(rig: Rig, sockets: dict[str, Socket], times: dict[str, list[int]]) -> list[bytes]:
+    """Ask both, in turns, and return the action server's replies."""
+    hello = Hello(
+        rig=rig.name, session="bench", observations=tuple(c.name for c in rig.observations),
+        actions=tuple(c.name for c in rig.actions), period_s=rig.timing.period_s,
+    )  # fmt: skip
+    welcome, _ = _ask(sockets["action"], encode(hello))
+    if not isinstance(decode(welcome, ACTION_REPLIES), Welcome):
+        raise LinkError(f"the action server did not welcome the session: {decode(welcome, ACTION_REPLIES)!r}")
+    frames = _frames(rig)
+    replies = []
+    for start in range(0, len(frames), TURN):
+        for name, socket in sockets.items():
+            for frame in frames[start : start + TURN]:
+                reply, taken_ns = _ask(socket, frame)
+                if name == "action":
+                    replies.append(reply)
+                if start >= WARM_UP:
+                    times[name].append(taken_ns)
+    return replies
+
+
+def _check(replies: list[bytes]) -> None:
+    """Make sure that what was measured is the policy at work."""
+    for frame in replies:
+        reply = decode(frame, ACTION_REPLIES)
+        if not isinstance(reply, Action) or reply.mode != "armed" or reply.version != 1:
+            raise LinkError(f"a query was not answered by the armed policy: {reply!r}")
