@@ -22,7 +22,15 @@ from nearhand.service.measure.distances import (
     median_bandwidth,
     mmd_squared,
 )
-from nearhand.service.measure.intervals import Interval, bootstrap, mean_interval, permutation_p, proportion_interval
+from nearhand.service.measure.intervals import (
+    FEWEST,
+    Interval,
+    bootstrap,
+    mean_interval,
+    permutation_p,
+    proportion_interval,
+    tails,
+)
 from nearhand.service.rigs import Rig
 
 Array = NDArray[np.float64]
@@ -69,9 +77,7 @@ def feature_figures(mine: Array, experts: Array) -> dict[str, Figure]:
     value = dual_norms(mine.mean(axis=0) - experts.mean(axis=0))
     halves = [_half_gap(experts, generator) for _ in range(HALVES)] if m >= 4 else []
     for name in CLASSES:
-        low, high = np.quantile([row[name] for row in sampled], [0.025, 0.975])
-        enough = n > 1 and m > 1
-        interval = Interval(value[name], low if enough else math.nan, high if enough else math.nan, n)
+        interval = Interval(value[name], *_span([row[name] for row in sampled], min(n, m)), n)
         found[f"feature_distance.{name}"] = figure(interval, "", "low")
         if halves:
             rows = [row[name] for row in halves]
@@ -79,13 +85,21 @@ def feature_figures(mine: Array, experts: Array) -> dict[str, Figure]:
             found[f"feature_distance.{name}"]["floor"] = figure(floor, "", "low")
     if n > 1 and m > 1:
         squares = [debiased_square(mine[a], experts[b]) for a, b in draws]
-        low, high = np.quantile(squares, [0.025, 0.975])
+        low, high = _span(squares, min(n, m))
         found["feature_distance.l2_squared_debiased"] = figure(
             Interval(debiased_square(mine, experts), float(low), float(high), n), "", "low"
         )
         p = permutation_p(mine, experts)
         found["feature_distance.p_same"] = figure(Interval(p, math.nan, math.nan, n + m), "", "high")
     return found
+
+
+def _span(values: Sequence[float], n: int) -> tuple[float, float]:
+    """Return the interval that bootstrap values of ``n`` episodes make; NaN where there are too few for one."""
+    if n < FEWEST:
+        return math.nan, math.nan
+    low, high = np.quantile(values, tails(n))
+    return float(low), float(high)
 
 
 def _half_gap(experts: Array, generator: np.random.Generator) -> dict[str, float]:
@@ -115,7 +129,7 @@ def sample_figures(mine: Rollouts, experts: Sequence[Episode], features: Feature
         floors.append((mmd_squared(x, y, bandwidth), energy_distance_squared(x, y)))
     found = {}
     for index, name in enumerate(("mmd2", "energy_distance")):
-        low, high = np.quantile([row[index] for row in draws], [0.025, 0.975])
+        low, high = _span([row[index] for row in draws], min(n, m))
         found[name] = figure(Interval(value[index], float(low), float(high), n), "", "low")
         if floors:
             column = [row[index] for row in floors]

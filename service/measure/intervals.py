@@ -11,10 +11,12 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.stats import beta
+from scipy.stats import beta, norm, t
 
 Array = NDArray[np.float64]
 LEVEL = 0.95
+#: With fewer episodes no bootstrap covers as it says (three normal values: 74 %), so there is no interval at all.
+FEWEST = 6
 RESAMPLES = 2_000
 
 
@@ -28,26 +30,39 @@ class Interval:
     n: int
 
 
-def bootstrap(statistic: Callable[[NDArray[np.int64]], float], n: int, *, seed: int = 0) -> Interval:
-    """Return the percentile bootstrap interval of a statistic of episodes.
+def tails(n: int) -> tuple[float, float]:
+    """Return the quantiles of bootstrap values that make a 95 % interval from ``n`` episodes.
 
-    Source: Efron & Tibshirani 1993, An Introduction to the Bootstrap, ch. 13 (from memory). With few episodes it is
-    too narrow: the bootstrap's standard error is smaller by √((n−1)/n).
+    The percentile interval of few episodes is too narrow, by √((n−1)/n) and by taking the normal for Student's t; the
+    expanded one corrects both: Φ(−√(n/(n−1))·t₀.₉₇₅,ₙ₋₁) on either side.
+    Source: Hesterberg 2015, The American Statistician 69:371–386 (from memory); coverage is tested.
+    """
+    if n < FEWEST:
+        return math.nan, math.nan
+    tail = float(norm.cdf(-math.sqrt(n / (n - 1)) * t.ppf((1 + LEVEL) / 2, n - 1)))
+    return tail, 1 - tail
+
+
+def bootstrap(statistic: Callable[[NDArray[np.int64]], float], n: int, *, seed: int = 0) -> Interval:
+    """Return the expanded percentile bootstrap interval of a statistic of episodes; see :func:`tails`.
+
+    Skewed figures of few episodes are still covered less often than 95 % (tested: 88 % and more for ten exponential
+    values).
 
     Args:
         statistic: maps episode indices (with repetitions) to the figure.
-        n: number of episodes; below 2 there is no interval and its ends are NaN.
+        n: number of episodes; below FEWEST there is no interval and its ends are NaN.
     """
     everyone = np.arange(n)
     value = float(statistic(everyone)) if n else math.nan
-    if n < 2 or not math.isfinite(value):
+    if n < FEWEST or not math.isfinite(value):
         return Interval(value, math.nan, math.nan, n)
     generator = np.random.default_rng(seed)
     draws = generator.integers(0, n, size=(RESAMPLES, n))
     values = np.array([statistic(row) for row in draws])
     if not np.isfinite(values).all():
         return Interval(value, math.nan, math.nan, n)
-    low, high = np.quantile(values, [(1 - LEVEL) / 2, (1 + LEVEL) / 2])
+    low, high = np.quantile(values, tails(n))
     return Interval(value, float(low), float(high), n)
 
 
@@ -56,10 +71,10 @@ def mean_interval(values: Array, *, seed: int = 0) -> Interval:
     values = np.asarray(values, dtype=np.float64)
     n = len(values)
     value = float(values.mean()) if n else math.nan
-    if n < 2 or not math.isfinite(value):
+    if n < FEWEST or not math.isfinite(value):
         return Interval(value, math.nan, math.nan, n)
     draws = np.random.default_rng(seed).integers(0, n, size=(RESAMPLES, n))
-    low, high = np.quantile(values[draws].mean(axis=1), [(1 - LEVEL) / 2, (1 + LEVEL) / 2])
+    low, high = np.quantile(values[draws].mean(axis=1), tails(n))
     return Interval(value, float(low), float(high), n)
 
 
