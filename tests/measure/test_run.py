@@ -32,17 +32,17 @@ def rig() -> Rig:
 
 @pytest.fixture(scope="module")
 def demonstrations(rig: Rig) -> list[Episode]:
-    """Twelve of the designed controller's episodes, a third held out."""
+    """Eighteen of the designed controller's episodes, a third held out."""
     assert rig.simulator is not None
     simulator = make_simulator(rig.simulator.name, rig.simulator.options)
     expert = make_expert("crane-designed", simulator, {})
-    done = roll_expert(simulator, expert, rig, 12, 5, lambda _: None)
+    done = roll_expert(simulator, expert, rig, 18, 5, lambda _: None)
     return [
         Episode(
             f"e{index}", rig.name, "designed", 0.02 * np.arange(120.0), observations.astype("f4"), actions.astype("f4"),
             split="held-out" if index % 3 == 0 else "train",
         )
-        for index, (observations, actions) in enumerate(done.episode(index) for index in range(12))
+        for index, (observations, actions) in enumerate(done.episode(index) for index in range(18))
     ]  # fmt: skip
 
 
@@ -94,7 +94,7 @@ def test_a_whole_measurement(rig: Rig, demonstrations: list[Episode], tmp_path: 
     assert figures["closed_loop.score_minus_in_service"]["low"] > 0
     assert 0 < figures["truncation_mass"]["value"] < 1
     assert {"expert", "policy", "differ_most_at_s"} <= set(result["traces"])
-    assert result["settings"]["held_out_episodes"] == 4
+    assert result["settings"]["held_out_episodes"] == 6
 
 
 def test_served_without_limits_in_the_way_is_the_bare_policy(rig: Rig) -> None:
