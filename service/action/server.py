@@ -8,7 +8,7 @@ from __future__ import annotations
 import contextlib
 from collections import Counter
 from collections.abc import Callable
-from typing import Any
+from typing import Any, Protocol
 
 import msgpack
 import zmq
@@ -25,13 +25,25 @@ from nearhand.service.bus.message import PROTOCOL_VERSION, ErrorReply
 from nearhand.service.bus.sockets import ACTION_QUEUE, BULK_QUEUE, bind, make_socket
 from nearhand.service.clock import Clock
 from nearhand.service.errors import NearhandError, UnknownNameError, WireError
-from nearhand.service.process import StopSignal
 
 #: Queries taken in a row before the control socket and the watchdogs get their turn.
 BURST = 64
 IDLE_MS = 1_000
 
 Socket = zmq.Socket[bytes]
+
+
+class Stop(Protocol):
+    """What ends the loop: a flag, and a descriptor that becomes readable with it."""
+
+    @property
+    def stopped(self) -> bool:
+        """Whether to end."""
+        ...
+
+    def fileno(self) -> int:
+        """Return the descriptor to poll."""
+        ...
 
 
 class ActionServer:
@@ -66,8 +78,8 @@ class ActionServer:
         self._action.close(linger=0)
         self._control.close(linger=0)
 
-    def run(self, stop: StopSignal) -> None:
-        """Serve until the stop signal."""
+    def run(self, stop: Stop) -> None:
+        """Serve until told to stop."""
         poller = zmq.Poller()
         poller.register(self._action, zmq.POLLIN)
         poller.register(self._control, zmq.POLLIN)

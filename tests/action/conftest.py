@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import os
+import threading
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -11,15 +13,20 @@ import numpy as np
 import pytest
 import zmq
 
+from nearhand.service.action.server import ActionServer
 from nearhand.service.bus.action_messages import ACTION_REPLIES, Act, Action, Hello
 from nearhand.service.bus.arrays import pack
 from nearhand.service.bus.codec import decode, encode
+from nearhand.service.bus.control_messages import CONTROL_REPLIES, Arm, Load
 from nearhand.service.bus.message import Message
+from nearhand.service.bus.sockets import BULK_QUEUE, make_socket
+from nearhand.service.clock import FakeClock
 from nearhand.service.envelope.novelty import calibrate
-from nearhand.service.policy.format import PolicyFile
+from nearhand.service.policy.format import PolicyFile, sha256, write_policy
 from nearhand.service.policy.network import Float32, Policy
 from nearhand.service.rigs import Rig
 
+Context = zmq.Context[zmq.Socket[bytes]]
 N, M = 3, 2
 
 
@@ -140,7 +147,101 @@ class Lane:
         return reply
 
 
+class Stop:
+    """A stop signal for a server in a thread: no process signals are involved."""
+
+    def __init__(self) -> None:
+        self.stopped = False
+        self._read, self._write = os.pipe()
+
+    def fileno(self) -> int:
+        """Return the descriptor to poll."""
+        return self._read
+
+    def stop(self) -> None:
+        """Wake the server and let it end."""
+        self.stopped = True
+        os.write(self._write, b"x")
+
+    def close(self) -> None:
+        """Close the pipe."""
+        os.close(self._read)
+        os.close(self._write)
+
+
+class Served:
+    """An action server in a thread, on a clock that moves only when told to, with clients for both lanes."""
+
+    def __init__(self, context: Context, control: str) -> None:
+        self.clock = FakeClock(10**12)
+        self._context = context
+        self._control_address = control
+        self._stop = Stop()
+        self._sockets: list[zmq.Socket[bytes]] = []
+        started = threading.Event()
+        self.address = ""
+
+        def serve() -> None:
+            server = ActionServer(context, "tcp://127.0.0.1:*", control, self.clock, "life-1")
+            self.address = server.address
+            started.set()
+            try:
+                server.run(self._stop)
+            finally:
+                server.close()
+
+        self._thread = threading.Thread(target=serve, name="action-server")
+        self._thread.start()
+        assert started.wait(10)
+        self._requests = 0
+        self._control = self._connect(control, zmq.DEALER)
+
+    def _connect(self, address: str, kind: int) -> zmq.Socket[bytes]:
+        socket = make_socket(self._context, kind, queue=BULK_QUEUE, role="connect")
+        socket.connect(address)
+        self._sockets.append(socket)
+        return socket
+
+    def lane(self, rig: Rig, session: str = "s1", kind: int = zmq.DEALER) -> Lane:
+        """Return a client of the action lane."""
+        return Lane(self._connect(self.address, kind), rig, session)
+
+    def control(self, frame: bytes) -> Message:
+        """Send a frame on the control lane and return its reply."""
+        self._control.send(frame)
+        assert self._control.poll(5_000), "no reply on the control lane"
+        return decode(self._control.recv(), CONTROL_REPLIES)
+
+    def do(self, kind: type[Message], **fields: Any) -> Message:
+        """Send a control request and return its reply."""
+        self._requests += 1
+        return self.control(encode(kind(**{"request": str(self._requests), **fields})))
+
+    def load(self, rig: Rig, version: int, file: PolicyFile | None) -> Message:
+        """Load a version; None takes it out of service."""
+        data = b"" if file is None else write_policy(file)
+        return self.do(
+            Load, rig=rig.name, description=rig.model_dump(mode="json"), version=version, policy=data,
+            sha256=sha256(data) if data else "",
+        )  # fmt: skip
+
+    def arm(self, rig: Rig) -> Message:
+        """Arm a rig."""
+        return self.do(Arm, rig=rig.name, who="ann", why="clear")
+
+    def close(self) -> None:
+        """End the thread and close the sockets."""
+        self._stop.stop()
+        self._thread.join(10)
+        assert not self._thread.is_alive()
+        for socket in self._sockets:
+            socket.close(linger=0)
+        self._stop.close()
+
+
 @pytest.fixture
-def ipc(tmp_path: Path) -> Iterator[str]:
-    """An ipc address; short, as the kernel wants it."""
-    yield f"ipc://{tmp_path / 'c'}"
+def served(context: Context, tmp_path: Path) -> Iterator[Served]:
+    """A running action server."""
+    running = Served(context, f"ipc://{tmp_path / 'c'}")
+    yield running
+    running.close()
