@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from nearhand.service.learn.cloning import Actor, held_out_nll
 from nearhand.service.learn.demonstrations import Demonstration
-from nearhand.service.learn.features import CostFeatures, Float64
+from nearhand.service.learn.features import FEATURE_SD_FLOOR, CostFeatures, Float64
 from nearhand.service.learn.online import Scene, matched
 from nearhand.service.learn.rollouts import Rollouts, roll_out, served
 from nearhand.service.policy.network import Float32
@@ -59,6 +59,8 @@ def segment_means(
 
     Every part of the ``horizon`` counts alike, without discount: what happens late, such as arriving, weighs as much as
     what happens early. Periods after a true terminal count as absorbed; a part that was cut off is NaN, not known.
+    The absorbed share is scaled by the least spread of a feature, as one that the expert hardly ever shows: an episode
+    that fell has features of zero afterwards, which is the expert's mean, and would otherwise look near.
     """
     edges = np.linspace(0, horizon, segments + 1).round().astype(int)
     rows = np.zeros((len(actions), segments, features.count + 1))
@@ -68,7 +70,7 @@ def segment_means(
             here = values[start:end]
             periods = end - start if ended[index] else len(here)
             rows[index, part, :-1] = here.sum(axis=0) / periods if periods else np.nan
-            rows[index, part, -1] = 1 - len(here) / periods if periods else np.nan
+            rows[index, part, -1] = (1 - len(here) / periods) / FEATURE_SD_FLOOR if periods else np.nan
     return rows.reshape(len(actions), -1)
 
 
