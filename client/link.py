@@ -159,7 +159,8 @@ class RigLink:
             if isinstance(answer, Action) and answer.seq == self._seq:
                 return answer
             if isinstance(answer, ErrorReply) and answer.seq == self._seq:
-                self._welcome = not answer.code.startswith(("unknown.", "conflict."))
+                if answer.code.startswith(("unknown.", "conflict.")):
+                    self._welcome, self._hello_at_ns = False, 0
                 self._replaced = answer.code == "conflict.session"
                 return None
             if answer is None:
