@@ -30,7 +30,7 @@ class CloneRecipe(Frozen):
     learning_rate: Positive = 3e-3
     weight_decay: Annotated[FiniteFloat, Field(ge=0)] = 1e-4
     sd_floor: Positive = 0.01
-    held_out: Fraction = 0.2
+    held_out: Fraction = 0.1
     past_action_noise: Annotated[FiniteFloat, Field(ge=0)] = 0.3
     spare_from: Annotated[int, Field(ge=2)] = 6
 

@@ -33,7 +33,7 @@ from nearhand.service.learn.layers import Layers
 from nearhand.service.learn.offline import fit_offline
 from nearhand.service.learn.online import OnlineProximalPoint, Scene
 from nearhand.service.learn.progress import restore_progress, save_progress
-from nearhand.service.learn.rollouts import InProcess, RigSimulator, served
+from nearhand.service.learn.rollouts import InProcess, RigSimulator, roll_out, served
 from nearhand.service.learn.selection import Selector
 from nearhand.service.learn.starts import Wanted
 from nearhand.service.policy.format import PolicyFile, write_policy
@@ -42,7 +42,9 @@ from nearhand.service.recipes import Recipe, recipe_from_map
 from nearhand.service.rigs import Rig
 
 Stopped = Callable[[], bool]
-#: Most windows that the confidence gate is calibrated against.
+#: Closed-loop runs of a version that its confidence gate is calibrated on; 1/129 is then its finest false-alarm rate.
+CLOSED_LOOP_RUNS = 128
+#: Most windows that the confidence gate is fitted on.
 MAX_REFERENCE = 20_000
 
 
@@ -134,7 +136,6 @@ def run_distil(
     files = {"clone": ("clone", cloned.actor)}
     if improved is not None:
         files["proximal"] = (improved.method, improved.actor)
-    novelty = _novelty(lesson)
     chosen = improved.chosen if improved else {"name": "clone", "reason": "the recipe asks for the clone alone"}
     provenance = {
         "seed": lesson.recipe.seed,
@@ -148,9 +149,11 @@ def run_distil(
         "cloning": {"steps": cloned.steps, "held_out": list(cloned.held_out), "note": cloned.note},
     }
     versions = []
-    for name, (method, actor) in files.items():
+    for number, (name, (method, actor)) in enumerate(files.items()):
+        policy = served(lesson.blank, actor)
+        novelty, calibrated_on = calibrated(lesson, policy, stopped)
         file = PolicyFile(
-            policy=served(lesson.blank, actor),
+            policy=policy,
             rig=lesson.rig.name,
             observations=tuple(channel.name for channel in lesson.rig.observations),
             actions=tuple(channel.name for channel in lesson.rig.actions),
@@ -160,10 +163,9 @@ def run_distil(
         )
         folder.write_bytes(f"output-{name}.policy", write_policy(file))
         wall_s = round(time.monotonic() - began_s, 3)
-        versions.append(
-            {"name": name, "method": method, "provenance": {**provenance, "method": method, "wall_s": wall_s}}
-        )
-    reporter.report("calibrating", 1.0)
+        own = {"method": method, "wall_s": wall_s, "confidence_gate": calibrated_on}
+        versions.append({"name": name, "method": method, "provenance": {**provenance, **own}})
+        reporter.report("calibrating", (number + 1) / len(files))
     curves = {
         **{f"cloning_{key}": values for key, values in cloned.curves.items()},
         **(improved.curves if improved else {}),
@@ -331,10 +333,27 @@ def _online(
     )  # fmt: skip
 
 
-def _novelty(lesson: Lesson) -> dict[str, Any]:
+def calibrated(lesson: Lesson, policy: Policy, stopped: Stopped) -> tuple[dict[str, Any], str]:
+    """Return a version's confidence gate, fitted on the training windows, and the words for what it is calibrated on.
+
+    Where the rig has a simulator the calibration episodes are closed-loop runs of this very version: a policy's own
+    closed loop is not exchangeable with the demonstrations. Otherwise they are the demonstrations set aside.
+    """
     reference = np.concatenate([item.windows for item in lesson.demonstrations])
     if len(reference) > MAX_REFERENCE:
         rows = np.random.default_rng((lesson.recipe.seed, 4)).permutation(len(reference))[:MAX_REFERENCE]
         reference = reference[np.sort(rows)]
-    windows = [item.windows for item in read_demonstrations(lesson.blank, rest_action(lesson.rig), lesson.calibration)]
-    return dict(calibrate(reference, windows)) if windows else {}
+    shown = [item.windows for item in read_demonstrations(lesson.blank, rest_action(lesson.rig), lesson.calibration)]
+    if lesson.rig.simulator is None:
+        return (dict(calibrate(reference, shown)) if shown else {}), f"{len(shown)} demonstrations"
+    if stopped():
+        raise LearningError("stopped before calibrating; the folder can be taken up again", code="learn.stopped")
+    make = RigSimulator(lesson.rig)
+    rolled = roll_out(
+        InProcess(), make, lesson.rig, policy, CLOSED_LOOP_RUNS, make().max_steps, (lesson.recipe.seed, 5), noisy=False
+    )
+    # A run that fell is none that a supervisor would have accepted.
+    kept = [rolled.windows[index, : rolled.lengths[index]] for index in np.flatnonzero(~rolled.terminated)]
+    if len(kept) < len(shown):
+        return dict(calibrate(reference, shown)), f"{len(shown)} demonstrations; only {len(kept)} runs did not fall"
+    return dict(calibrate(reference, kept)), f"{len(kept)} closed-loop runs of this version in the simulator"

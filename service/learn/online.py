@@ -41,7 +41,7 @@ from nearhand.service.policy.network import Float32, Policy
 from nearhand.service.recipes import OnlineRecipe
 from nearhand.service.rigs import Rig
 
-#: A roll-out distance this many times the best so far, for so many iterations on end, sends the run back to its best.
+#: A roll-out distance this many times that of the clone, for so many iterations on end, sends the run back to its best.
 LOST_FACTOR, LOST_PATIENCE = 2.0, 3
 ALPHA_START = 1.0
 
@@ -84,6 +84,7 @@ class Progress:
     best_log_sd: Float32
     iteration: int = 0
     alpha: float = ALPHA_START
+    first_distance: float = float("inf")
     best_distance: float = float("inf")
     lost: int = 0
     caution: float = 1.0
@@ -269,11 +270,13 @@ class OnlineProximalPoint:
     def _keep_or_return(self, distance: float, reference: Actor) -> str:
         """Note the best iterate; when the run has got lost, go back to it and say so."""
         state = self.progress
+        if state.iteration == 0:
+            state.first_distance = distance
         if distance < state.best_distance:
             state.best_distance, state.lost = distance, 0
             state.best, state.best_log_sd = reference.flat.clone(), reference.log_sd
             return ""
-        state.lost = state.lost + 1 if distance > LOST_FACTOR * state.best_distance else 0
+        state.lost = state.lost + 1 if distance > LOST_FACTOR * state.first_distance else 0
         if state.lost < LOST_PATIENCE:
             return ""
         state.lost = 0
@@ -281,8 +284,8 @@ class OnlineProximalPoint:
         state.actor = Adam(state.best.clone())
         state.log_sd = np.maximum(state.best_log_sd, np.log(self._sd_floor())).astype(np.float32)
         return (
-            f"feature distance {distance:.3g} stayed over {LOST_FACTOR:g} times the best, {state.best_distance:.3g}; "
-            "back to the best iterate with half the step"
+            f"feature distance {distance:.3g} stayed over {LOST_FACTOR:g} times that of the clone, "
+            f"{state.first_distance:.3g}; back to the best iterate with half the step"
         )
 
     def _improve(self, evaluated: _Evaluated, reference: Actor) -> dict[str, float]:

@@ -11,7 +11,7 @@ from nearhand.service.learn.online import OnlineProximalPoint
 
 NAME = "proximal"
 OPTIMISERS = ("actor", "critic", "cost", "absorbing")
-NUMBERS = ("iteration", "alpha", "best_distance", "lost", "caution", "steps", "curves", "messages")
+NUMBERS = ("iteration", "alpha", "first_distance", "best_distance", "lost", "caution", "steps", "curves", "messages")
 
 
 def save_progress(folder: JobFolder, run: OnlineProximalPoint, identity: str) -> None:

@@ -2,7 +2,7 @@
 
 A handful of demonstrations began at a handful of places. Their mean features differ from the roll-outs' for that reason
 alone, and a cost fitted to the difference would teach nothing about driving. Choosing, among many sets of start states,
-one that is alike, and then re-weighting whole roll-outs, takes the start out of the comparison. The weights are the same
+one that is alike, and then re-weighting whole roll-outs, takes the start out of the comparison. The same weights stand
 in the start distribution and in the occupancy, so the flow constraint still holds.
 """
 
