@@ -20,7 +20,7 @@ from nearhand.service.envelope.novelty import NoveltyScore
 from nearhand.service.errors import ConfigError, LearningError
 from nearhand.service.jobs.folder import JobFolder
 from nearhand.service.jobs.reporter import Reporter
-from nearhand.service.learn.distil import run_distil
+from nearhand.service.learn.distil import CLOSED_LOOP_RUNS, run_distil
 from nearhand.service.policy.format import read_policy
 
 SMALL: dict[str, Any] = {
