@@ -75,7 +75,8 @@ def test_job_writes_two_readable_policies_with_gate_provenance_and_curves(
     for one in result["versions"]:
         file = read_policy(folder.read_bytes(f"output-{one['name']}.policy"))
         assert (file.rig, file.observations, file.actions) == ("integrator", ("position", "velocity"), ("drive",))
-        assert NoveltyScore(file.novelty).smallest_epsilon == pytest.approx(1 / 5)
+        assert NoveltyScore(file.novelty).smallest_epsilon == pytest.approx(1 / (CLOSED_LOOP_RUNS + 1))
+        assert "closed-loop runs of this version" in one["provenance"]["confidence_gate"]
         provenance = one["provenance"]
         assert provenance["training_episodes"] == [item.episode for item in episodes[:6]]
         assert len(provenance["training_sha256"]) == 64

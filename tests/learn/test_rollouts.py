@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from concurrent.futures import Future, ThreadPoolExecutor
+from multiprocessing.reduction import ForkingPickler
 from typing import Any
 
 import numpy as np
@@ -15,7 +16,8 @@ from nearhand.service.errors import LearningError
 from nearhand.service.learn.cloning import Actor
 from nearhand.service.learn.demonstrations import blank_policy
 from nearhand.service.learn.layers import Adam, Layers
-from nearhand.service.learn.rollouts import InProcess, RigSimulator, Rollouts, roll_out, served
+from nearhand.service.learn.rollouts import InProcess, RigSimulator, Rollouts, drive, roll_out, served
+from nearhand.service.learn.starts import Wanted
 from nearhand.service.policy.network import Policy, episode_windows
 from nearhand.service.rigs import Rig
 
@@ -99,6 +101,12 @@ def test_who_does_the_work_changes_nothing(rigs: Any, recorded: Any) -> None:
     for name in ("windows", "asked", "applied", "lengths", "terminated", "shares"):
         np.testing.assert_array_equal(getattr(here, name), getattr(there, name))
     assert here.steps == 6 * 50
+
+
+def test_work_can_be_sent_to_another_process(rigs: Any, recorded: Any) -> None:
+    rig = rigs("integrator")
+    work = (drive, RigSimulator(rig), rig, noisy_policy(rig, recorded), Wanted(np.zeros((1, 2)), np.ones(1)))
+    assert len(ForkingPickler.dumps(work)) > 0
 
 
 def test_in_process_executor_hands_errors_to_the_future() -> None:
