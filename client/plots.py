@@ -95,16 +95,18 @@ def distances(figures: Mapping[str, Mapping[str, Any]], names: Sequence[str]) ->
     for row, name in enumerate(names):
         beside: list[Mapping[str, Any] | None] = [figures[name], figures[name].get("floor"), figures[name].get("clone")]
         unit = max((abs(end) for one in beside for end in _ends(one)), default=0.0) or 1.0
-        for one, offset, (label, colour, marker) in zip(beside, (-0.22, 0.0, 0.22), SERIES, strict=True):
+        for one, offset, (_, colour, marker) in zip(beside, (-0.22, 0.0, 0.22), SERIES, strict=True):
             ends = _ends(one)
             if one is None or not ends:
                 continue
             axis.plot([min(ends) / unit, max(ends) / unit], [row + offset] * 2, "-", color=colour, lw=1.6)
-            axis.plot(one["value"] / unit, row + offset, marker, color=colour, ms=4.5, label=label if not row else None)
+            axis.plot(one["value"] / unit, row + offset, marker, color=colour, ms=4.5)
     axis.set_yticks(range(len(names)), names, fontsize=8)
     axis.set_ylim(len(names) - 0.5, -0.6)
     axis.set_xlabel("each figure in units of the largest value in its row; bars are 95 % intervals")
-    axis.legend(fontsize=8, loc="upper center", bbox_to_anchor=(0.4, 1.12 + 0.5 / len(names)), ncols=3, frameon=False)
+    for label, colour, marker in SERIES:
+        axis.plot([], [], marker, color=colour, ms=4.5, label=label)
+    made.legend(fontsize=8, loc="outside upper center", ncols=3, frameon=False)
     return _svg(made)
 
 

@@ -99,7 +99,7 @@ def _job_result(desk: Desk, job: object) -> dict[str, Any]:
 
 def _last_inspection(desk: Desk, rig: str) -> list[str]:
     jobs = desk.ask(ListJobs, JobsReply, rig=rig).jobs
-    done = [int(row["job"]) for row in jobs if row.get("job_kind") == "inspect" and row.get("state") == "done"]
+    done = [int(row["job"]) for row in jobs if row.get("kind") == "inspect" and row.get("state") == "done"]
     result = _job_result(desk, max(done)) if done else {}
     return [str(verdict["sentence"]) for verdict in result.get("verdicts", [])]
 
