@@ -43,6 +43,7 @@ class OnlineRecipe(Frozen):
     of the explored actions at the first iteration and ``sd_floor`` at the last, in half ranges. ``ess_floor`` is the
     least share of effective samples under the tilted weights. ``anchor`` weighs the cloning term of the improvement.
     The critic starts from nothing, so the first evaluation takes ``first_inner_steps`` instead of ``inner_steps``.
+    ``pieces`` is how many pieces of work each batch of roll-outs is divided into, for whoever brings more cores.
     """
 
     iterations: Annotated[int, Field(ge=1, le=10_000)] = 40
@@ -65,6 +66,7 @@ class OnlineRecipe(Frozen):
     ess_floor: Fraction = 0.5
     anchor: Annotated[FiniteFloat, Field(ge=0)] = 1.0
     averaging: Fraction = 0.9
+    pieces: Annotated[int, Field(ge=1, le=256)] = 1
 
 
 class OfflineRecipe(Frozen):

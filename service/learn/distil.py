@@ -33,7 +33,7 @@ from nearhand.service.learn.layers import Layers
 from nearhand.service.learn.offline import fit_offline
 from nearhand.service.learn.online import OnlineProximalPoint, Scene
 from nearhand.service.learn.progress import restore_progress, save_progress
-from nearhand.service.learn.rollouts import InProcess, RigSimulator, roll_out, served
+from nearhand.service.learn.rollouts import InProcess, OneSimulator, RigSimulator, roll_out, served
 from nearhand.service.learn.selection import Selector
 from nearhand.service.learn.starts import Wanted
 from nearhand.service.policy.format import PolicyFile, write_policy
@@ -291,9 +291,10 @@ def _online(
         features=fit_features(len(lesson.rig.observations), lesson.demonstrations),
         discount=effective_discount(recipe.online.discount, lengths),
         horizon=min(int(simulator.max_steps), max(lengths)),
-        make=lambda: simulator if isinstance(executor, InProcess) else make(),
+        make=OneSimulator(simulator) if isinstance(executor, InProcess) else make,
         executor=executor,
         seed=recipe.seed,
+        pieces=recipe.online.pieces,
         wanted=Wanted(
             shown=np.stack([item.observations[0] for item in lesson.train]).astype(np.float64),
             weights=np.asarray([item.weight for item in lesson.train], dtype=np.float64),

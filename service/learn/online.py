@@ -59,6 +59,7 @@ class Scene:
     make: MakeSimulator
     executor: Executor
     seed: int
+    pieces: int
     wanted: Wanted
 
 
@@ -241,7 +242,7 @@ class OnlineProximalPoint:
         reference = Actor(self.clone.layers, state.actor.values.detach().clone(), state.log_sd)
         rollouts = roll_out(
             scene.executor, scene.make, scene.rig, served(scene.blank, reference), recipe.episodes, scene.horizon,
-            (scene.seed, 2, 2, state.iteration), noisy=True, wanted=scene.wanted,
+            (scene.seed, 2, 2, state.iteration), noisy=True, wanted=scene.wanted, parts=scene.pieces,
         )  # fmt: skip
         rollouts = matched(scene, rollouts)
         means = mean_features(scene.features, rollouts, scene.discount)

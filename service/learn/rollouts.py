@@ -78,6 +78,17 @@ class RigSimulator:
         return make_simulator(self.rig.simulator.name, self.rig.simulator.options)
 
 
+@dataclass(frozen=True)
+class OneSimulator:
+    """Hands out one simulator again and again, for work in this process."""
+
+    simulator: Simulator
+
+    def __call__(self) -> Simulator:
+        """Return it."""
+        return self.simulator
+
+
 def served(blank: Policy, actor: Actor) -> Policy:
     """Return the actor as a NumPy policy with the normalisation of ``blank``."""
     weights, biases = actor.layers.arrays(actor.flat)

@@ -157,7 +157,7 @@ class Selector:
         scene = self._scene
         rollouts = roll_out(
             scene.executor, scene.make, scene.rig, served(scene.blank, actor), self._episodes, scene.horizon,
-            (scene.seed, 3, stage), noisy=False, wanted=scene.wanted,
+            (scene.seed, 3, stage), noisy=False, wanted=scene.wanted, parts=scene.pieces,
         )  # fmt: skip
         self.steps += rollouts.steps
         rollouts = matched(scene, rollouts)
