@@ -37,24 +37,18 @@ def with_interval(figure: Mapping[str, Any] | None) -> str:
 def distance_table(measurement: Mapping[str, Any], title: str) -> RenderableType:
     """Return the table of distances: version, expert's floor and clone side by side, with 95 % intervals."""
     from rich.table import Table
+    from rich.text import Text
 
-    table = Table(title=title, title_justify="left", caption="95 % intervals over episodes", caption_justify="left")
-    table.add_column("figure")
-    table.add_column("unit")
-    table.add_column("this version", justify="right")
-    table.add_column("expert's floor", justify="right")
-    table.add_column("clone", justify="right")
-    table.add_column("episodes", justify="right")
+    table = Table(title=title, title_justify="left", caption="[95 % intervals] over n episodes", caption_justify="left")
+    table.add_column("figure", overflow="fold", min_width=20)
+    for name in ("this version", "expert's floor", "clone"):
+        table.add_column(name, justify="right", no_wrap=True)
+    table.add_column("n", justify="right", no_wrap=True)
     figures: Mapping[str, Mapping[str, Any]] = measurement.get("figures", {})
     for name, figure in figures.items():
-        table.add_row(
-            name,
-            str(figure.get("unit", "")),
-            with_interval(figure),
-            with_interval(figure.get("floor")),
-            with_interval(figure.get("clone")),
-            str(figure.get("n", "")),
-        )
+        cells = (with_interval(one).replace(" [", "\n[") for one in (figure, figure.get("floor"), figure.get("clone")))
+        unit = f" ({figure['unit']})" if figure.get("unit") else ""
+        table.add_row(Text(f"{name}{unit}"), *map(Text, cells), str(figure.get("n", "")))
     return table
 
 
@@ -75,14 +69,16 @@ def gate_table(reply: ReleaseReply) -> RenderableType:
 
 def inspection_tables(result: Mapping[str, Any], *, most: int | None = None) -> tuple[RenderableType, ...]:
     """Return what was found of the episodes (at most so many of them), and what to do about it."""
+    from rich import box
     from rich.table import Table
     from rich.text import Text
 
-    table = Table(title=f"demonstrations of {result.get('rig', '?')}", title_justify="left")
+    title = f"demonstrations of {result.get('rig', '?')}"
+    table = Table(box=box.SIMPLE_HEAD, pad_edge=False, padding=(0, 1, 0, 0), title=title, title_justify="left")
     for name in ("episode", "operator", "use", "outcome"):
-        table.add_column(name)
-    for name in ("s", "idle s", "sat. %", "gaps", "jitter %"):
-        table.add_column(name, justify="right")
+        table.add_column(name, no_wrap=True)
+    for name in ("s", "idle s", "sat.%", "gaps", "jit.%"):
+        table.add_column(name, justify="right", no_wrap=True)
     rows = result.get("episodes", [])
     for row in rows[:most]:
         saturated = max(row.get("saturation", {}).values(), default=0.0)
