@@ -217,14 +217,9 @@ class AxisGuard:
             return wanted
         still = towards_standstill(self.axis, velocity, self._period_s)
         up_pending, down_pending = _bounds(self._recent), _bounds([-one for one in self._recent])
+        # Neither side asks for more than standstill, and neither refuses what brings it: the two never conflict.
         lowered = self._up.highest(up_room, velocity, wanted, still, up_pending)
-        raised = -self._down.highest(down_room, -velocity, -lowered, -still, down_pending)
-        if raised == lowered:
-            return lowered
-        # Both limits are near: what the one asks for, the other must allow.
-        if self._up.highest(up_room, velocity, raised, still, up_pending) < raised:
-            return still
-        return raised
+        return -self._down.highest(down_room, -velocity, -lowered, -still, down_pending)
 
 
 def _bounds(recent: Sequence[float] | deque[float]) -> list[float]:

@@ -12,6 +12,9 @@ from hypothesis import strategies as st
 
 from nearhand.service.action.governor import Decision, Governor
 from nearhand.service.bus.action_messages import Reason
+from nearhand.service.envelope.braking import Guards
+from nearhand.service.envelope.chain import limit
+from nearhand.service.envelope.limits import Limits
 from nearhand.service.errors import ConflictError, PolicyFormatError
 from nearhand.service.policy.format import PolicyFile
 from nearhand.service.policy.network import Float32, episode_windows
@@ -288,6 +291,30 @@ def test_a_new_session_starts_its_numbers_and_its_clock_again(rig_with: RigWith,
     # A session that begins after the deadline of an armed rig finds it latched.
     driver.governor.begin_session("u", driver.now_ns + 10**10)
     assert driver.governor.mode == "latched"
+
+
+def test_braking_knows_the_actions_of_the_past(rig_with: RigWith, file_with: FileWith) -> None:
+    rig = rig_with(
+        braking=[
+            {
+                "position": "o0", "velocity": "o1", "action": "u", "low": -2.0, "high": 2.0, "deceleration": 0.8,
+                "reaction_s": 0.2,
+            }
+        ]
+    )  # fmt: skip
+    driver = armed(rig, file_with((0.9, 0.25)))
+    limits = Limits.of(rig)
+    guards, held = Guards(limits), limits.rest
+    proposal = np.array([0.9, 0.25], dtype=np.float32)
+    place = speed = 0.0
+    for _ in range(100):
+        row = np.array([place, speed, 0.0], dtype=np.float32)
+        guards.note(held)
+        held = limit(limits, proposal, held, row, guards).action
+        answer = driver.ask(row)
+        assert np.array_equal(answer.action, held)
+        place, speed = place + 0.02 * speed, speed + 0.02 * float(held[0])
+    assert driver.governor.counts["braked"] > 10
 
 
 numbers = st.floats(width=32) | st.sampled_from([0.0, np.nan, np.inf, -np.inf, 3.4e38, -3.4e38])

@@ -270,6 +270,12 @@ def test_a_flood_of_garbage_does_not_hold_the_link(rigged: Rigged, pretender: Pr
     assert time.monotonic() - begin_s < PATIENCE_S / 2
 
 
+def test_a_reply_buried_in_garbage_is_not_dug_for(rigged: Rigged, pretender: Pretender) -> None:
+    assert rigged.exchange().fresh
+    pretender.answer = lambda act: [b"\xc1"] * 200 + [pretender.action(act)]
+    assert not rigged.exchange().fresh
+
+
 def test_a_restarted_service_is_greeted_again(rigged: Rigged, pretender: Pretender) -> None:
     assert rigged.exchange().fresh
 

@@ -11,7 +11,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from nearhand.service.envelope.braking import Guards
+from nearhand.service.envelope.braking import AxisGuard, Guards
 from nearhand.service.envelope.chain import limit
 from nearhand.service.envelope.fallback import FallbackAction
 from nearhand.service.envelope.limits import Limits
@@ -188,3 +188,29 @@ def test_a_fast_start_inside_the_set_is_stopped(rig_with: RigWith) -> None:
         needed = velocity * (0.02 + 0.08 + 0.5 / 2.4) + velocity**2 / (2 * 0.5) + 0.5 * 0.06**2 / 2
         axis, _ = run(rig, [(9.0, 2000)], position=rig.braking[0].high - needed, velocity=velocity)
         assert_inside(axis, rig)
+
+
+def test_what_a_late_drive_may_still_follow_is_reckoned_with(rig_with: RigWith) -> None:
+    limits = Limits.of(rig_with(braking={"reaction_s": 0.2}))
+    resting, accelerating = (AxisGuard(limits.axes[0], limits) for _ in range(2))
+    for guard, action in ((resting, 0.0), (accelerating, 0.6)):
+        guard.restart(0.0)
+        for _ in range(11):
+            guard.note(action)
+    # Speed 1 m/s with 1.8 m left: 0.2 s and a transit of 0.6 m/s² more make a difference of some 0.13 m/s.
+    assert accelerating.keep(2.2, 1.0, 0.5) < resting.keep(2.2, 1.0, 0.5) - 0.05
+    for _ in range(11):
+        accelerating.note(0.0)
+    assert accelerating.keep(2.2, 1.0, 0.5) == resting.keep(2.2, 1.0, 0.5)
+
+
+@pytest.mark.parametrize("velocity", [-0.5, -0.01, 0.0, 0.01, 0.5])
+@pytest.mark.parametrize("wanted", [-0.6, 0.0, 0.6])
+def test_between_limits_too_near_for_any_motion_it_only_comes_to_standstill(
+    rig_with: RigWith, velocity: float, wanted: float
+) -> None:
+    limits = Limits.of(rig_with(braking={"low": -5e-4, "high": 5e-4}))
+    kept = AxisGuard(limits.axes[0], limits).keep(0.0, velocity, wanted)
+    assert kept * velocity <= 0.0
+    if velocity == 0.0:
+        assert kept == 0.0
