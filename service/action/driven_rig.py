@@ -7,7 +7,8 @@ from typing import Any
 import numpy as np
 
 from nearhand.service.action.governor import Decision, Governor
-from nearhand.service.bus.action_messages import Act, Hello, Welcome
+from nearhand.service.action.queries import Query
+from nearhand.service.bus.action_messages import Hello, Welcome
 from nearhand.service.bus.arrays import unpack
 from nearhand.service.clock import Clock
 from nearhand.service.errors import ConflictError, UnknownNameError, WireError
@@ -27,6 +28,7 @@ class DrivenRig:
     def __init__(self, rig: Rig, clock: Clock) -> None:
         self.rig = rig
         self.governor = Governor(rig)
+        self._n, self._m = len(rig.observations), len(rig.actions)
         self._clock = clock
         self._session = ""
         self._last_ns: int | None = None
@@ -63,29 +65,29 @@ class DrivenRig:
             deadline_s=self.rig.timing.deadline_s, lease_s=self.rig.timing.lease_s,
         )  # fmt: skip
 
-    def act(self, message: Act) -> Decision:
+    def act(self, query: Query) -> Decision:
         """Answer one query.
 
         Raises:
             ConflictError: the session is not the present one.
             WireError: a vector has the wrong size; an observation of the wrong size also trips.
         """
-        if message.session != self._session:
+        if query.session != self._session:
             if not self._session:
-                raise UnknownNameError(f"session {message.session} is unknown here; say hello", code="unknown.session")
-            raise ConflictError(f"session {message.session} was replaced by a newer one", code="conflict.session")
+                raise UnknownNameError(f"session {query.session} is unknown here; say hello", code="unknown.session")
+            raise ConflictError(f"session {query.session} was replaced by a newer one", code="conflict.session")
         now_ns = self._clock.now_ns()
         self._last_ns = now_ns
-        size = len(self.rig.observations)
         applied = None
-        if message.applied is not None:
-            applied = unpack(message.applied, len(self.rig.actions), what="applied")
+        if query.applied is not None:
+            applied = unpack(query.applied, self._m, what="applied")
         try:
-            observation = unpack(message.obs, size, what="obs")
+            observation = unpack(query.obs, self._n, what="obs")
         except WireError:
-            self.governor.act(np.full(size, np.nan, dtype=np.float32), message.seq, message.sent_ns, now_ns, applied)
+            nothing = np.full(self._n, np.nan, dtype=np.float32)
+            self.governor.act(nothing, query.seq, query.sent_ns, now_ns, applied)
             raise
-        return self.governor.act(observation, message.seq, message.sent_ns, now_ns, applied)
+        return self.governor.act(observation, query.seq, query.sent_ns, now_ns, applied)
 
     def state(self) -> dict[str, Any]:
         """Return what the keeper shows of the rig."""

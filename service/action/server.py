@@ -14,8 +14,10 @@ import msgpack
 import zmq
 from pydantic import ValidationError
 
+from nearhand.service.action import queries
 from nearhand.service.action.control import Control
 from nearhand.service.action.driven_rig import DrivenRig
+from nearhand.service.action.queries import Query
 from nearhand.service.action.records import Occurrences
 from nearhand.service.bus.action_messages import ACTION_REQUESTS, Act, Hello
 from nearhand.service.bus.arrays import WIRE_DTYPE
@@ -120,9 +122,12 @@ class ActionServer:
         table: dict[str, Any] = {}
         try:
             table = decode_map(frame)
+            query = queries.usual(table)
+            if query is not None:
+                return self._act(query)
             message = from_map(table, ACTION_REQUESTS)
             if isinstance(message, Act):
-                return self._act(message)
+                return self._act(queries.of(message))
             if not isinstance(message, Hello):
                 raise WireError(f"{message.kind} is no request of this lane", code="wire.kind")
             welcome = self._driven(message.rig).hello(message)
@@ -137,11 +142,11 @@ class ActionServer:
             text = f"an internal error: {type(error).__name__}"
             return encode(ErrorReply(code="error.internal", message=text, seq=_count(table.get("seq"))))
 
-    def _act(self, message: Act) -> bytes:
-        driven = self._driven(message.rig)
-        decision = driven.act(message)
+    def _act(self, query: Query) -> bytes:
+        driven = self._driven(query.rig)
+        decision = driven.act(query)
         reply = {
-            "v": PROTOCOL_VERSION, "kind": "action", "seq": message.seq, "sent_ns": message.sent_ns,
+            "v": PROTOCOL_VERSION, "kind": "action", "seq": query.seq, "sent_ns": query.sent_ns,
             "action": decision.action.astype(WIRE_DTYPE, copy=False).tobytes(), "mode": decision.mode,
             "version": decision.version, "lease_s": driven.rig.timing.lease_s, "reasons": decision.reasons,
             "novelty": decision.novelty,

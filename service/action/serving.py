@@ -46,7 +46,9 @@ class History:
 
 
 class Serving:
-    """One policy, ready to be asked; gives what ``Policy.action`` gives for the same window.
+    """One policy, ready to be asked; gives what ``Policy.action`` gives for the same window, but for rounding.
+
+    The biases stand as last rows of the weights, beside an input that is always 1; the last layer is in action units.
 
     Args:
         policy: the policy.
@@ -55,10 +57,20 @@ class Serving:
     def __init__(self, policy: Policy) -> None:
         self._policy = policy
         n, split = policy.observation_size, policy.observation_size * (1 + policy.past_observations)
-        self.window: Float32 = np.zeros(policy.input_size, dtype=np.float32)
+        inputs = np.ones(policy.input_size + 1, dtype=np.float32)
+        inputs[:-1] = 0.0
+        self.window: Float32 = inputs[:-1]
         self._observed = self.window[:split].reshape(1 + policy.past_observations, n)
         self._acted = self.window[split:].reshape(policy.past_actions, policy.action_size)
-        self._hidden = [np.empty(bias.shape, dtype=np.float32) for bias in policy.biases]
+        weights = [np.vstack(pair) for pair in zip(policy.weights, policy.biases, strict=True)]
+        weights[-1] = weights[-1] * policy.action_half
+        weights[-1][-1] += policy.action_middle
+        self._layers: list[tuple[Float32, Float32, Float32]] = []
+        for weight in weights[:-1]:
+            outputs = np.ones(weight.shape[1] + 1, dtype=np.float32)
+            self._layers.append((inputs, np.ascontiguousarray(weight, dtype=np.float32), outputs[:-1]))
+            inputs = outputs
+        self._inputs, self._last = inputs, np.ascontiguousarray(weights[-1], dtype=np.float32)
 
     def look(self, observed: History, acted: History) -> None:
         """Fill the window from the histories of observations and of applied actions."""
@@ -71,13 +83,8 @@ class Serving:
 
     def propose(self) -> Float32 | None:
         """Return the policy's action (m,) for the window, or None if it is not finite."""
-        policy, values = self._policy, self.window
-        last = len(self._hidden) - 1
-        for layer, out in enumerate(self._hidden):
-            np.matmul(values, policy.weights[layer], out=out)
-            np.add(out, policy.biases[layer], out=out)
-            if layer < last:
-                np.tanh(out, out=out)
-            values = out
-        action: Float32 = policy.action_middle + policy.action_half * values
+        for inputs, weight, outputs in self._layers:
+            inputs.dot(weight, out=outputs)
+            np.tanh(outputs, out=outputs)
+        action: Float32 = self._inputs.dot(self._last)
         return action if math.isfinite(sum(action.tolist())) else None

@@ -254,8 +254,8 @@ class Guards:
         for guard in self._guards:
             guard.note(float(action[guard.axis.action]))
 
-    def keep(self, action: Float32, observation: Sequence[float] | NDArray[np.floating]) -> bool:
-        """Change ``action`` (m,) in place where braking asks for it; tell whether it did.
+    def keep(self, action: list[float], observation: Sequence[float] | NDArray[np.floating]) -> bool:
+        """Change ``action``, m numbers, in place where braking asks for it; tell whether it did.
 
         Args:
             observation: (n,) finite.
@@ -263,7 +263,7 @@ class Guards:
         changed = False
         for guard in self._guards:
             axis = guard.axis
-            wanted = float(action[axis.action])
+            wanted = action[axis.action]
             kept = guard.keep(float(observation[axis.position]), float(observation[axis.velocity]), wanted)
             if kept != wanted:
                 action[axis.action] = kept

@@ -44,18 +44,31 @@ def limit(
     Returns:
         The action: inside the range, and at most one slew step from ``previous``.
     """
-    low = np.maximum(limits.low, previous - limits.slew_step)
-    high = np.minimum(limits.high, previous + limits.slew_step)
-    action = np.minimum(np.maximum(proposed, low), high)
-    clipped = slewed = braked = False
-    if (action != proposed).any():
-        inside = np.minimum(np.maximum(proposed, limits.low), limits.high)
-        clipped = bool((np.abs(inside - proposed) > limits.rounding).any())
-        slewed = bool((np.abs(action - inside) > limits.rounding).any())
-    if limits.axes and guards is not None and observation is not None and guards.keep(action, observation):
-        braked = True
-        action = np.minimum(np.maximum(action, low), high)
-    return Limited(action, clipped, slewed, braked)
+    # Plain numbers: for the few channels of a machine this is several times faster than array operations.
+    action: list[float] = []
+    clipped = slewed = False
+    for wanted, before, (low, high, step, rounding) in zip(
+        proposed.tolist(), previous.tolist(), limits.channels, strict=True
+    ):
+        least, most = before - step, before + step
+        if least < low:
+            least = low
+        if most > high:
+            most = high
+        if not least <= wanted <= most:
+            inside = low if wanted < low else high if wanted > high else wanted
+            clipped = clipped or abs(inside - wanted) > rounding
+            wanted = least if inside < least else most if inside > most else inside
+            slewed = slewed or abs(wanted - inside) > rounding
+        action.append(wanted)
+    braked = False
+    if limits.axes and guards is not None and observation is not None:
+        braked = guards.keep(action, observation)
+        if braked:
+            for index, (low, high, step, _) in enumerate(limits.channels):
+                before = float(previous[index])
+                action[index] = min(max(action[index], low, before - step), high, before + step)
+    return Limited(np.array(action, dtype=np.float32), clipped, slewed, braked)
 
 
 def slew(limits: Limits, wanted: Float32, previous: Float32, step: Float32 | None = None) -> Float32:

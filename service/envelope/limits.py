@@ -42,6 +42,7 @@ class Limits:
         ramp_step: (m,) the fallback's change per control period, at most ``slew_step``.
         at_once: the fallback commands rest at once, whatever the slew.
         hold_s: how long the fallback first holds the last action.
+        channels: low, high, slew step and rounding of each action channel, as plain numbers.
         period_s, lease_s: see :class:`nearhand.service.rigs.Timing`.
         axes: the braking axes.
     """
@@ -57,6 +58,7 @@ class Limits:
     period_s: float
     lease_s: float
     axes: tuple[Axis, ...]
+    channels: tuple[tuple[float, float, float, float], ...]
 
     @classmethod
     def of(cls, rig: Rig) -> Limits:
@@ -82,11 +84,13 @@ class Limits:
         reach = np.minimum(column("high") - column("low"), LARGEST)
         slew_step = _inwards(np.minimum(column("slew_per_s") * period_s, LARGEST), up=False)
         ramp_step = _inwards(np.minimum(reach * min(fallback.ramp_per_s * period_s, 1.0), slew_step), up=False)
+        rounding = np.asarray(ROUNDING * reach, dtype=np.float32)
+        columns = np.stack((low, high, slew_step, rounding), axis=1).tolist()
         return cls(
             low=low,
             high=high,
             rest=np.clip(column("rest").astype(np.float32), low, high),
-            rounding=np.asarray(ROUNDING * reach, dtype=np.float32),
+            rounding=rounding,
             slew_step=slew_step,
             ramp_step=ramp_step,
             at_once=fallback.kind == "rest",
@@ -94,6 +98,7 @@ class Limits:
             period_s=period_s,
             lease_s=rig.timing.lease_s,
             axes=axes,
+            channels=tuple((one[0], one[1], one[2], one[3]) for one in columns),
         )
 
 

@@ -95,8 +95,8 @@ class NoveltyScore:
         return self.p_of(self._distance(window))
 
     def _distance(self, window: Float32) -> float:
-        gap = self._whitening @ (window - self._centre)
-        squared = float(gap @ gap)
+        gap = self._whitening.dot(window - self._centre)
+        squared = float(gap.dot(gap))
         # Rounded as the maxima are, so that equals compare as equals.
         return float(np.float32(math.sqrt(squared))) if math.isfinite(squared) else math.inf
 

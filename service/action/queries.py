@@ -1,0 +1,56 @@
+"""The queries of the action lane, checked by hand where they are as usual; anything else goes to the message models."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any, NamedTuple
+
+from nearhand.service.bus.action_messages import Act
+from nearhand.service.bus.message import PROTOCOL_VERSION
+
+FIELDS = {"v", "kind", "rig", "session", "seq", "sent_ns", "obs"}
+FIELDS_APPLIED = FIELDS | {"applied"}
+LIMIT = 2**63
+
+
+class Query(NamedTuple):
+    """What ``act`` says."""
+
+    rig: str
+    session: str
+    seq: int
+    sent_ns: int
+    obs: bytes | tuple[float, ...]
+    applied: bytes | tuple[float, ...] | None
+
+
+def of(message: Act) -> Query:
+    """Return the query of a message."""
+    return Query(message.rig, message.session, message.seq, message.sent_ns, message.obs, message.applied)
+
+
+def usual(table: Mapping[str, Any]) -> Query | None:
+    """Return the query in a decoded map if it is an ``act`` with vectors of bytes; None leaves it to the model.
+
+    The names' form is not looked at: a name that is no rig's and no session's is refused later in any case.
+    """
+    applied = table.get("applied")
+    if table.keys() != (FIELDS if "applied" not in table else FIELDS_APPLIED):
+        return None
+    version, seq, sent_ns = table["v"], table["seq"], table["sent_ns"]
+    rig, session, obs = table["rig"], table["session"], table["obs"]
+    if (
+        table["kind"] == "act"
+        and type(version) is int
+        and version == PROTOCOL_VERSION
+        and type(rig) is str
+        and type(session) is str
+        and type(seq) is int
+        and 0 <= seq < LIMIT
+        and type(sent_ns) is int
+        and 0 <= sent_ns < LIMIT
+        and type(obs) is bytes
+        and (applied is None or type(applied) is bytes)
+    ):
+        return Query(rig, session, seq, sent_ns, obs, applied)
+    return None
