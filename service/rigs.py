@@ -178,6 +178,14 @@ class Rig(Frozen):
             for role, known in (("position", observed), ("velocity", observed), ("action", acted)):
                 if getattr(axis, role) not in known:
                     raise ValueError(f"braking {role} = {getattr(axis, role)!r} is no such channel: {sorted(known)}")
+        ranges = {channel.name: (channel.low, channel.high) for channel in self.actions}
+        for axis in self.braking:
+            low, high = ranges[axis.action]
+            if axis.drives == "acceleration" and not low < 0 < high:
+                raise ValueError(
+                    f"braking of {axis.position}: {axis.action} ranges over [{low}, {high}] and so cannot decelerate "
+                    "both ways; its range must reach below and above 0"
+                )
         if self.expert is not None and self.expert not in self.experts:
             raise ValueError(f"expert = {self.expert!r} is not among experts {sorted(self.experts)}")
         return self

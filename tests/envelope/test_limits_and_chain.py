@@ -86,3 +86,11 @@ def test_absurd_ranges_stay_finite(rig_with: RigWith) -> None:
 def test_from_outside_a_tightened_range_the_range_wins_over_slew(rig_with: RigWith) -> None:
     limits = Limits.of(rig_with())
     assert slew(limits, vector(2.0, 0.1), vector(1.5, 0.1))[0] == limits.high[0]
+
+
+@pytest.mark.parametrize("ends", [(0.0, 0.6), (-0.6, 0.0), (0.1, 0.6)])
+def test_an_axis_that_could_not_brake_is_refused(rig_with: RigWith, ends: tuple[float, float]) -> None:
+    drive = {"name": "drive", "unit": "m/s²", "low": ends[0], "high": ends[1], "rest": ends[0], "slew_per_s": 6.0}
+    with pytest.raises(ValueError, match="cannot decelerate both ways"):
+        rig_with(actions=[drive])
+    assert rig_with(actions=[drive], braking={"drives": "velocity"}).braking[0].drives == "velocity"
