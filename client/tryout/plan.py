@@ -54,5 +54,5 @@ def make_plan(rig: Rig, rig_source: str, *, quick: bool) -> Plan:
         recipe="quick" if quick else "standard",
         training_episodes=0,
         measured_episodes=20 if quick else 50,
-        driven_episodes=20,
+        driven_episodes=10 if quick else 20,
     )
