@@ -1,7 +1,8 @@
 """The stone yard's travelling crane: carry a slab between bays, past people and a low gate, and land it still.
 
 The yard is a line. Near people (``zone``) the trolley must be slow; in the height-limited gate (``gate``) the slab must
-not rise, so its swing is limited; at the target the slab must hang still. An episode lasts until its time is up.
+not rise, so its swing is limited; at the target the slab must hang still. Buffers end the runway beyond the bays. An
+episode lasts until its time is up.
 """
 
 from __future__ import annotations
@@ -11,22 +12,23 @@ from numpy.typing import NDArray
 
 from nearhand.service.simulators import Options, Step
 from nearhand.sim.crane_dynamics import GRAVITY, Array, free_accelerations, rk4, swing_acceleration
-from nearhand.sim.crane_options import CraneOptions, crane_options
+from nearhand.sim.crane_options import YARD_M, CraneOptions, crane_options
 from nearhand.sim.disturbances import ColouredNoise, quantise
 
 #: Where the trolley stands at the beginning, m from the yard's end, for either direction of travel.
 START_LOW_M = 1.0
 START_HIGH_M = 2.5
-YARD_M = 16.0
-FORCE_PER_ACCELERATION = 1000.0
+#: Speed over the zone's limit that is no breach yet, and speed that counts as standing, m/s.
+SPEED_TOLERANCE = 0.1
+STANDING_SPEED = 0.05
 
 
 class Crane:
     """A batch of crane episodes; see :class:`nearhand.service.simulators.Simulator`.
 
     Observations: trolley position m, trolley velocity m/s, swing angle rad, swing rate rad/s, rope length m, distance
-    to the target m (signed). Action: acceleration demand m/s², or the driving force as its 1000th part in kN·… when
-    ``drive = "force"`` (an action of 1 stands for 1000 N).
+    to the target m (signed). Action: acceleration demand m/s²; with ``drive = "force"`` a driving force, in the unit
+    that would accelerate trolley and load as one by 1 m/s².
     """
 
     observation_size = 6
@@ -57,6 +59,7 @@ class Crane:
         self._wind.reset(count, self._generator)
         self._steps = 0
         self._gate_touched = np.zeros(count, dtype=bool)
+        self._end_touched = np.zeros(count, dtype=bool)
         self._speed_excess = np.zeros(count)
         self._peak_swing = np.abs(self._state[1])
         self._landed_at_s = np.full(count, np.nan)
@@ -83,7 +86,7 @@ class Crane:
             else:
                 load = o.load_kg * o.mass_scale
                 out[2], out[3] = free_accelerations(
-                    theta, velocity, rate, FORCE_PER_ACCELERATION * drive, trolley=np.full(count, o.trolley_kg),
+                    theta, velocity, rate, o.force_unit * drive, trolley=np.full(count, o.trolley_kg),
                     load=np.full(count, load), rope=rope, friction=np.full(count, o.friction),
                     swing_friction=o.swing_friction_per_s * load * rope**2, wind=wind,
                 )  # fmt: skip
@@ -92,10 +95,21 @@ class Crane:
 
         for _ in range(o.substeps):
             self._state = rk4(derivative, self._state, o.period_s / o.substeps)
+        self._stop_at_buffers()
         self._steps += 1
         score = self._judge()
         over = self._steps >= self.max_steps
         return Step(self._observe(), score, np.zeros(count, dtype=bool), np.full(count, over))
+
+    def _stop_at_buffers(self) -> None:
+        """Stop a trolley that has run into a buffer; the load swings on."""
+        o = self.options
+        position = self._state[0]
+        hit = (position <= o.runway_low_m) | (position >= o.runway_high_m)
+        if hit.any():
+            self._state[0] = np.clip(position, o.runway_low_m, o.runway_high_m)
+            self._state[2] = np.where(hit, 0.0, self._state[2])
+            self._end_touched |= hit
 
     def _observe(self) -> Array:
         o = self.options
@@ -132,15 +146,18 @@ class Crane:
             landed, np.where(np.isnan(self._landed_at_s), self._steps * o.period_s, self._landed_at_s), np.nan
         )
         progress = np.clip(1 - np.abs(load - self._target) / self._distance, 0.0, 1.0)
-        clean = ~self._gate_touched & (self._speed_excess < 0.1)
-        return np.asarray((0.5 * progress + 0.5 * landed) * np.where(clean, 1.0, 0.5))
+        return np.asarray((0.5 * progress + 0.5 * landed) * np.where(self._is_clean(), 1.0, 0.5))
+
+    def _is_clean(self) -> NDArray[np.bool_]:
+        """Tell which episodes have kept the yard's rules so far."""
+        return ~self._gate_touched & ~self._end_touched & (self._speed_excess < SPEED_TOLERANCE)
 
     def _is_landed(self) -> NDArray[np.bool_]:
         o = self.options
         return np.asarray(
             (np.abs(self._state[0] - self._target) < o.landing_tolerance_m)
             & (self._residual_swing() < o.swing_tolerance_rad)
-            & (np.abs(self._state[2]) < 0.05)
+            & (np.abs(self._state[2]) < STANDING_SPEED)
         )
 
     def _residual_swing(self) -> Array:
@@ -150,7 +167,7 @@ class Crane:
 
     def outcomes(self) -> dict[str, Array]:
         """Return (B,) figures of the episodes so far; see Simulator."""
-        success = self._is_landed() & ~self._gate_touched & (self._speed_excess < 0.1)
+        success = self._is_landed() & self._is_clean()
         time_s = np.where(np.isnan(self._landed_at_s), self.max_steps * self.period_s, self._landed_at_s)
         return {
             "success": success.astype(np.float64),
@@ -159,6 +176,7 @@ class Crane:
             "residual_swing_rad": self._residual_swing(),
             "landing_error_m": np.abs(self._state[0] - self._target),
             "gate_touched": self._gate_touched.astype(np.float64),
+            "end_touched": self._end_touched.astype(np.float64),
             "speed_excess_mps": self._speed_excess,
         }
 

@@ -57,6 +57,21 @@ def free_accelerations(
     return acceleration, angular
 
 
+def driving_force(
+    theta: Array, velocity: Array, theta_rate: Array, acceleration: Array, *, trolley: Array, load: Array, rope: Array,
+    friction: Array,
+) -> Array:  # fmt: skip
+    """Return the force F (N) that gives the trolley this acceleration, without wind and swing friction.
+
+    F = (M + m·sin²θ)·x'' + b·x' − m·g·sin θ·cos θ − m·L·θ'²·sin θ: the two equations with θ'' eliminated, the inverse
+    of :func:`free_accelerations`.
+    """
+    sine, cosine = np.sin(theta), np.cos(theta)
+    inertia = (trolley + load * sine**2) * acceleration
+    force: Array = inertia + friction * velocity - load * GRAVITY * sine * cosine - load * rope * theta_rate**2 * sine
+    return force
+
+
 def rk4(derivative: Callable[[Array], Array], state: Array, step_s: float) -> Array:
     """Advance ``state`` by one step of the classical fourth-order Runge–Kutta method."""
     first = derivative(state)

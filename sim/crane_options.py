@@ -2,13 +2,19 @@
 
 from __future__ import annotations
 
-from typing import Annotated, Literal
+import math
+from typing import Annotated, Literal, Self
 
-from pydantic import Field, FiniteFloat, ValidationError
+from pydantic import Field, FiniteFloat, ValidationError, model_validator
 
 from nearhand.service.errors import ConfigError
 from nearhand.service.rigs import Frozen, Positive, sentence
 from nearhand.service.simulators import Options
+
+#: Length of the yard: every bay lies within it.
+YARD_M = 16.0
+#: Longest integration step as a multiple of the drive's lag: the Runge–Kutta method is stable to 2.785.
+STABLE_SHARE = 2.7
 
 NotNegative = Annotated[FiniteFloat, Field(ge=0)]
 
@@ -18,6 +24,7 @@ class CraneOptions(Frozen):
 
     Attributes:
         drive: the trolley follows an acceleration demand, or is pushed by a force.
+        runway_low_m, runway_high_m: buffers that stop the trolley dead; beyond every bay.
         rope_scale, mass_scale, gain, lag_s, swing_bias_rad: changed dynamics, for studies.
     """
 
@@ -50,10 +57,33 @@ class CraneOptions(Frozen):
     zone_speed: Positive = 0.8
     gate_low_m: FiniteFloat = 9.0
     gate_high_m: FiniteFloat = 10.0
-    gate_clearance_m: Positive = 0.08
+    gate_clearance_m: Positive = 0.02
+    runway_low_m: FiniteFloat = -3.0
+    runway_high_m: FiniteFloat = 19.0
     top_speed: Positive = 2.0
     landing_tolerance_m: Positive = 0.08
     swing_tolerance_rad: Positive = 0.02
+
+    @model_validator(mode="after")
+    def _consistent(self) -> Self:
+        for low, high in (
+            ("rope_low_m", "rope_high_m"), ("distance_low_m", "distance_high_m"), ("zone_low_m", "zone_high_m"),
+            ("gate_low_m", "gate_high_m"), ("runway_low_m", "runway_high_m"),
+        ):  # fmt: skip
+            if getattr(self, low) > getattr(self, high):
+                raise ValueError(f"{low} = {getattr(self, low)} must not be above {high} = {getattr(self, high)}")
+        substep_s = self.period_s / self.substeps
+        if substep_s > STABLE_SHARE * self.lag_s:
+            raise ValueError(
+                f"lag_s = {self.lag_s} is too short for substeps = {self.substeps} of a period of {self.period_s} s; "
+                f"give at least {math.ceil(self.period_s / (STABLE_SHARE * self.lag_s))} substeps or a longer lag"
+            )
+        return self
+
+    @property
+    def force_unit(self) -> float:
+        """Force of an action of 1 when ``drive = "force"``, N: it accelerates trolley and load as one by 1 m/s²."""
+        return self.trolley_kg + self.load_kg
 
 
 def crane_options(options: Options) -> CraneOptions:

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
-from typing import Annotated
+from typing import Annotated, Any
 
+import gymnasium
 import mujoco
 import numpy as np
 from numpy.typing import NDArray
@@ -18,6 +19,8 @@ from nearhand.sim.lqr import discrete_gain
 Array = NDArray[np.float64]
 #: Step of the finite differences, in coordinates, speeds and controls.
 DIFFERENCE = 1e-5
+#: What is smaller than this in the observation's slope is rounding.
+RANK_TOLERANCE = 1e-6
 
 
 class LqrOptions(Frozen):
@@ -69,11 +72,31 @@ def linearise(model: mujoco.MjModel, steps: int) -> tuple[Array, Array]:
     return jacobian[:, : 2 * nv], jacobian[:, 2 * nv :]
 
 
+def observation_slope(bare: gymnasium.Env[Any, Any], model: mujoco.MjModel, a: Array) -> tuple[Array, Array]:
+    """Return (o₀, C): the observation near the initial pose at rest is o₀ + C·(q, q').
+
+    What an environment shows after one step from a set state is o₀ + C·A·(q, q'), so A is divided out; a sine of an
+    angle thus counts as the angle, and a cosine as nothing.
+
+    Args:
+        a: A of one control period, from :func:`linearise`.
+    """
+    bare.reset(seed=0)
+    nv, idle = model.nv, np.zeros(model.nu)
+
+    def seen(state: Array) -> Array:
+        bare.set_state(model.qpos0 + state[:nv], state[nv:])  # type: ignore[attr-defined]
+        return np.asarray(bare.step(idle)[0], dtype=np.float64)
+
+    moves = DIFFERENCE * np.eye(2 * nv)
+    after = np.array([(seen(move) - seen(-move)) / (2 * DIFFERENCE) for move in moves]).T
+    return seen(np.zeros(2 * nv)), np.linalg.solve(a.T, after.T).T
+
+
 class LqrExpert:
-    """u = −K·(q, q'), with the state read from the environments themselves."""
+    """u = −K·(q, q'), with the state told from the observation by its slope about the initial pose."""
 
     def __init__(self, simulator: GymnasiumRig, options: LqrOptions) -> None:
-        self._simulator = simulator
         self._noise = options.noise
         bare = make_environment(simulator.options).unwrapped
         model = getattr(bare, "model", None)
@@ -83,12 +106,26 @@ class LqrExpert:
             )
         a, b = linearise(model, int(getattr(bare, "frame_skip", 1)))
         nv = model.nv
-        self._pose = model.qpos0.copy()
         q = np.diag([options.position_weight] * nv + [options.velocity_weight] * nv)
-        self.gain, _ = discrete_gain(a, b, q, options.action_weight * np.eye(model.nu))
+        try:
+            self.gain, _ = discrete_gain(a, b, q, options.action_weight * np.eye(model.nu))
+        except ValueError as error:  # LinAlgError among them
+            raise ConfigError(
+                f"environment {simulator.options.env} has no regulator about its initial pose: {error}",
+                code="config.expert",
+            ) from error
         self.closed_loop = a - b @ self.gain
+        self._rest, slope = observation_slope(bare, model, a)
+        bare.close()
+        if np.linalg.matrix_rank(slope, tol=RANK_TOLERANCE) < 2 * nv:
+            raise ConfigError(
+                f"environment {simulator.options.env}: its observation does not tell all {nv} coordinates and speeds; "
+                "this expert needs them",
+                code="config.expert",
+            )
+        self._observed_gain = self.gain @ np.linalg.pinv(slope, rcond=RANK_TOLERANCE)
         limits = model.actuator_ctrlrange
-        self._half = (limits[:, 1] - limits[:, 0]) / 2
+        self._low, self._high = limits[:, 0].copy(), limits[:, 1].copy()
 
     def reset(self, observations: Array, *, seed: int) -> None:
         """Begin new episodes; see Expert."""
@@ -96,13 +133,10 @@ class LqrExpert:
 
     def act(self, observations: Array) -> Array:
         """Return actions (B, m); see Expert."""
-        rows = [
-            np.concatenate((env.unwrapped.data.qpos - self._pose, env.unwrapped.data.qvel))  # type: ignore[attr-defined]
-            for env in self._simulator.environments
-        ]
-        wanted = -np.array(rows) @ self.gain.T
-        noise = self._noise * self._half * self._generator.standard_normal(wanted.shape)
-        return np.asarray(np.clip(wanted + noise, -self._half, self._half))
+        wanted = -(observations - self._rest) @ self._observed_gain.T
+        half = (self._high - self._low) / 2
+        noise = self._noise * half * self._generator.standard_normal(wanted.shape)
+        return np.asarray(np.clip(wanted + noise, self._low, self._high))
 
 
 def make_lqr(simulator: Simulator, options: Options) -> LqrExpert:

@@ -44,10 +44,10 @@ def make_environment(options: GymnasiumOptions) -> gymnasium.Env[Any, Any]:
     """
     try:
         with warnings.catch_warnings():
-            # A model's own notes on its future are the environment maker's business, not the operator's.
-            warnings.simplefilter("ignore")
+            # The rig's description names a version on purpose: that there is a newer one is no news.
+            warnings.filterwarnings("ignore", message=".*is out of date", category=DeprecationWarning)
             made = gymnasium.make(options.env, disable_env_checker=True, **options.kwargs)
-    except (gymnasium.error.Error, TypeError, ImportError, AttributeError) as error:
+    except (gymnasium.error.Error, TypeError, ValueError, AssertionError, ImportError, AttributeError) as error:
         raise ConfigError(
             f"cannot make the environment {options.env!r}: {error}; give a registered name with its package installed",
             code="config.environment",

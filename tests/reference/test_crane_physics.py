@@ -12,7 +12,7 @@ import numpy as np
 import pytest
 from scipy.special import ellipk
 
-from nearhand.sim.crane_dynamics import GRAVITY, Array, free_accelerations, rk4, swing_acceleration
+from nearhand.sim.crane_dynamics import GRAVITY, Array, driving_force, free_accelerations, rk4, swing_acceleration
 
 TROLLEY, LOAD, ROPE = (np.full(1, value) for value in (5.0, 2.0, 0.8))
 ZERO = np.zeros(1)
@@ -43,6 +43,28 @@ def test_accelerations_solve_the_two_by_two_mass_matrix(
     """Expected values: NumPy's solution of the 2×2 system; at 90° exactly m·L·θ'²/(M+m) and −g/L."""
     assert accelerations(*state, force, 0.0, 0.0) == pytest.approx(free, abs=1e-9)
     assert accelerations(*state, force, 0.6, 0.01) == pytest.approx(rubbed, abs=1e-9)
+
+
+def test_the_driving_force_is_the_one_that_gives_the_reference_accelerations() -> None:
+    """The inverse, on the same states: forces 4 N and −10 N from NumPy's accelerations, trolley friction 0.6."""
+    for theta, velocity, rate, free, force in (
+        (0.3, 0.2, -0.5, 1.8662757674672, 4.0),
+        (1.2, -0.4, 1.5, -0.0027259041235529, -10.0),
+    ):
+        found = driving_force(
+            np.full(1, theta), np.full(1, velocity), np.full(1, rate), np.full(1, free), trolley=TROLLEY, load=LOAD,
+            rope=ROPE, friction=np.full(1, 0.6),
+        )  # fmt: skip
+        assert found[0] == pytest.approx(force + 0.6 * velocity, abs=1e-9)
+
+
+def test_the_linearisation_is_the_textbook_one() -> None:
+    """x'' = (F + m·g·θ)/M, θ'' = −(F + (M+m)·g·θ)/(M·L): slopes 3.924, −17.1675 in θ and 0.2, −0.25 in F."""
+    small = 1e-6
+    by_angle = [value / small for value in accelerations(small, 0.0, 0.0, 0.0, 0.0, 0.0)]
+    by_force = [value / small for value in accelerations(0.0, 0.0, 0.0, small, 0.0, 0.0)]
+    assert by_angle == pytest.approx([3.924, -17.1675], abs=1e-6)
+    assert by_force == pytest.approx([0.2, -0.25], abs=1e-6)
 
 
 @pytest.mark.parametrize(
@@ -96,6 +118,13 @@ def test_free_motion_agrees_with_the_reference_integrator_and_keeps_energy_and_m
     assert state[:, 0] == pytest.approx(reference, abs=2e-5)
 
 
+def arithmetic_geometric_mean(first: float, second: float) -> float:
+    """Return AGM(a, b)."""
+    while abs(first - second) > 1e-15 * first:
+        first, second = (first + second) / 2, math.sqrt(first * second)
+    return first
+
+
 @pytest.mark.parametrize("degrees", [10, 30, 60, 90])
 def test_the_period_at_large_amplitude_is_the_elliptic_integral(degrees: float) -> None:
     """T/T₀ = (2/π)·K(sin²(θ₀/2)); SciPy's ``ellipk`` takes the parameter m = k²."""
@@ -113,6 +142,9 @@ def test_the_period_at_large_amplitude_is_the_elliptic_integral(degrees: float) 
     # The angle is linear to 1e-9 within the last step: interpolate the crossing.
     quarter_s = time_s - step_s * float(state[0, 0]) / (float(state[0, 0]) - before)
     expected_s = 2 * math.pi / math.sqrt(GRAVITY) * (2 / math.pi) * ellipk(math.sin(amplitude / 2) ** 2)
+    # A second way to the same figure: T₀ over the arithmetic-geometric mean of 1 and cos(θ₀/2).
+    mean = arithmetic_geometric_mean(1.0, math.cos(amplitude / 2))
+    assert expected_s == pytest.approx(2 * math.pi / math.sqrt(GRAVITY) / mean, rel=1e-12)
     assert 4 * quarter_s == pytest.approx(expected_s, rel=1e-6)
 
 

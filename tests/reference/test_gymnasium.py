@@ -6,7 +6,10 @@ Facts read from the registry of Gymnasium 1.x and its built environments.
 from __future__ import annotations
 
 import math
+import warnings
+from typing import Any
 
+import gymnasium
 import numpy as np
 import pytest
 
@@ -14,7 +17,8 @@ from nearhand.configs import builtin_text
 from nearhand.service.errors import ConfigError
 from nearhand.service.rigs import rig_from_toml
 from nearhand.service.simulators import make_expert, make_simulator
-from nearhand.sim.gymnasium_rig import GymnasiumRig
+from nearhand.sim.gymnasium_expert import LqrExpert
+from nearhand.sim.gymnasium_rig import GymnasiumRig, checked, make_environment
 
 
 @pytest.mark.parametrize(
@@ -54,24 +58,75 @@ def test_one_step_of_the_pendulum_by_its_formula(
 
 
 def test_the_regulator_balances_the_double_pendulum_and_chance_does_not() -> None:
+    """A thousand control periods from the environment's own starts; the registry's threshold is a return of 9100."""
     rig = rig_from_toml(builtin_text("rigs", "double-pendulum"))
     assert rig.simulator is not None
-    simulator = make_simulator(rig.simulator.name, rig.simulator.options)
+    simulator = make_simulator(rig.simulator.name, {**rig.simulator.options, "max_steps": 1000})
+    assert (simulator.observation_size, simulator.action_size) == (len(rig.observations), len(rig.actions))
     expert = make_expert("gymnasium-lqr", simulator, {})
-    observations = simulator.reset(3, seed=4)
+    observations = simulator.reset(5, seed=4)
     expert.reset(observations, seed=4)
     for _ in range(simulator.max_steps):
         step = simulator.step(expert.act(observations))
         observations = step.observations
     assert step.truncated.all()
     assert not step.terminated.any()
-    assert simulator.outcomes()["success"].all()
+    outcomes = simulator.outcomes()
+    assert outcomes["success"].all()
+    assert (outcomes["return"] > 9100).all()
     generator = np.random.default_rng(1)
     simulator.reset(3, seed=4)
     for _ in range(100):
         step = simulator.step(generator.uniform(-1, 1, (3, 1)))
     assert step.terminated.all()
     assert not simulator.outcomes()["success"].any()
+
+
+def test_the_regulator_acts_on_the_observation_it_is_given() -> None:
+    """Not on where the simulator happens to be; near upright it is −K·(q, q') with sines for angles."""
+    simulator = make_simulator("gymnasium", {"env": "InvertedDoublePendulum-v5"})
+    expert = make_expert("gymnasium-lqr", simulator, {"noise": 0.0})
+    assert isinstance(expert, LqrExpert)
+    expert.reset(simulator.reset(1, seed=1), seed=1)
+    state = np.array([0.02, 0.01, -0.015, 0.05, -0.04, 0.03])
+    sines, cosines = np.sin(state[1:3]), np.cos(state[1:3])
+    shown = np.concatenate((state[:1], sines, cosines, state[3:], [0.0]))[None]
+    # Sine and angle differ by 6e-7 here, central differences by less.
+    assert expert.act(shown)[0] == pytest.approx(-expert.gain @ state, abs=1e-4)
+    mirrored = np.concatenate((-state[:1], -sines, cosines, -state[3:], [0.0]))[None]
+    assert expert.act(mirrored)[0] == pytest.approx(expert.gain @ state, abs=1e-4)
+
+
+def test_an_expert_that_cannot_be_is_refused() -> None:
+    for env, part in (("Pendulum-v1", "no MuJoCo model"), ("Reacher-v5", "no regulator")):
+        with pytest.raises(ConfigError, match=part):
+            make_expert("gymnasium-lqr", make_simulator("gymnasium", {"env": env}), {})
+
+
+def test_only_the_note_on_an_older_version_is_silenced() -> None:
+    """The rig's TOML names the version; any other warning reaches the operator (and fails this test run)."""
+    make_environment(checked({"env": "InvertedPendulum-v4"}))
+
+    def maker(**kwargs: Any) -> gymnasium.Env[Any, Any]:
+        warnings.warn("the bearings are worn", UserWarning, stacklevel=2)
+        return gymnasium.make("Pendulum-v1").unwrapped
+
+    gymnasium.register("WornPendulum-v0", entry_point=maker)
+    try:
+        with pytest.warns(UserWarning, match="bearings are worn"):
+            make_environment(checked({"env": "WornPendulum-v0"}))
+    finally:
+        del gymnasium.registry["WornPendulum-v0"]
+
+
+@pytest.mark.parametrize(("least", "expected"), [(-1e9, 1.0), (1e9, 0.0)])
+def test_success_by_return(least: float, expected: float) -> None:
+    simulator = make_simulator("gymnasium", {"env": "Pendulum-v1", "max_steps": 3, "success_return": least})
+    simulator.reset(2, seed=1)
+    for _ in range(3):
+        step = simulator.step(np.zeros((2, 1)))
+    assert step.truncated.all()
+    assert simulator.outcomes()["success"] == pytest.approx([expected] * 2)
 
 
 def test_an_ended_episode_stays_as_it_was() -> None:
