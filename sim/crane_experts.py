@@ -19,6 +19,10 @@ from nearhand.sim.operator import Delay, Lag
 
 #: Rope lengths are rounded to this before a gain is computed, so that few are.
 ROPE_STEP_M = 0.05
+#: A trolley at rest is set moving with this acceleration, which then grows with the speed reached: without memory of
+#: its last demand the controller keeps within what the drive may change in a period.
+GENTLE = 0.1
+GENTLE_TIME_S = 0.07
 #: Time constant of the operator's remnant.
 REMNANT_TIME_S = 0.3
 
@@ -82,6 +86,8 @@ class DesignedExpert:
         # Whoever accelerates otherwise than planned hangs otherwise: tan θ = −a/g.
         hanging = expected - (base - feed) / GRAVITY
         demand = base - self._gain[:, 1] * (theta - hanging) - self._gain[:, 2] * (rate - expected_rate)
+        gentle = GENTLE + np.abs(velocity) / GENTLE_TIME_S
+        demand = np.clip(demand, -gentle, gentle)
         if self._o.drive == "force":
             o = self._o
             force = driving_force(
