@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
+from itertools import groupby
 from typing import TYPE_CHECKING, Any
 
 from nearhand.service.bus.desk_messages import ReleaseReply
@@ -35,21 +36,38 @@ def with_interval(figure: Mapping[str, Any] | None) -> str:
 
 
 def distance_table(measurement: Mapping[str, Any], title: str) -> RenderableType:
-    """Return the table of distances: version, expert's floor and clone side by side, with 95 % intervals."""
+    """Return the table of distances: version, expert's floor and clone side by side, with 95 % intervals.
+
+    It fits eighty columns: figures stand under their family, intervals under their values.
+    """
+    from rich import box
     from rich.table import Table
     from rich.text import Text
 
-    table = Table(title=title, title_justify="left", caption="[95 % intervals] over n episodes", caption_justify="left")
-    table.add_column("figure", overflow="fold", min_width=20)
+    table = Table(box=box.SIMPLE_HEAD, pad_edge=False, padding=(0, 1, 0, 0), title=title, title_justify="left")
+    table.caption, table.caption_justify = "value and [95 % interval] over n episodes", "left"
+    table.add_column("figure", min_width=16, overflow="fold")
     for name in ("this version", "expert's floor", "clone"):
         table.add_column(name, justify="right", no_wrap=True)
-    table.add_column("n", justify="right", no_wrap=True)
     figures: Mapping[str, Mapping[str, Any]] = measurement.get("figures", {})
-    for name, figure in figures.items():
-        cells = (with_interval(one).replace(" [", "\n[") for one in (figure, figure.get("floor"), figure.get("clone")))
-        unit = f" ({figure['unit']})" if figure.get("unit") else ""
-        table.add_row(Text(f"{name}{unit}"), *map(Text, cells), str(figure.get("n", "")))
+    for family, names in groupby(figures, key=lambda name: name.partition(".")[0]):
+        members = list(names)
+        alone = members == [family]
+        table.add_row(Text(f"{family.replace('_', ' ')}, {_counts(figures[name] for name in members)}", style="bold"))
+        for name in members:
+            figure = figures[name]
+            sources = (figure, figure.get("floor"), figure.get("clone"))
+            cells = (Text(with_interval(source).replace(" [", "\n[")) for source in sources)
+            unit = f" ({figure['unit']})" if figure.get("unit") else ""
+            words = "distance" if alone else name.removeprefix(f"{family}.").replace("_", " ")
+            table.add_row(Text(f"· {words}{unit}"), *cells)
     return table
+
+
+def _counts(figures: Iterable[Mapping[str, Any]]) -> str:
+    """Return over how many episodes the figures were taken: ``n = 12`` or ``n = 12–50``."""
+    counts = sorted({int(figure["n"]) for figure in figures if figure.get("n") is not None})
+    return f"n = {counts[0]}–{counts[-1]}" if len(counts) > 1 else f"n = {counts[0]}" if counts else "n = –"
 
 
 def gate_table(reply: ReleaseReply) -> RenderableType:

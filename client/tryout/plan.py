@@ -43,7 +43,7 @@ def make_plan(rig: Rig, rig_source: str, *, quick: bool) -> Plan:
     is one, gives some more, which are inspected beside them.
     """
     expert = rig.expert or next(iter(rig.experts))
-    demonstrations = {expert: 72 if quick else 96}
+    demonstrations = {expert: 96}
     if "operator" in rig.experts and expert != "operator":
         demonstrations["operator"] = 3 if quick else 6
     return Plan(
@@ -53,6 +53,6 @@ def make_plan(rig: Rig, rig_source: str, *, quick: bool) -> Plan:
         demonstrations=demonstrations,
         recipe="quick" if quick else "standard",
         training_episodes=0,
-        measured_episodes=20 if quick else 50,
+        measured_episodes=30 if quick else 50,
         driven_episodes=10 if quick else 20,
     )
