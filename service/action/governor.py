@@ -9,7 +9,7 @@ from __future__ import annotations
 import math
 from collections import Counter, deque
 from collections.abc import Sequence
-from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 
@@ -28,8 +28,7 @@ from nearhand.service.rigs import Rig
 FORM, LATE = int(Reason.FORM), int(Reason.LATE)
 
 
-@dataclass(frozen=True, slots=True)
-class Decision:
+class Decision(NamedTuple):
     """The answer to one query: the action (m,) and everything that is said about it."""
 
     action: Float32
@@ -130,7 +129,7 @@ class Governor:
                     f"{file.policy.input_size}"
                 )
         self._file, self._novelty, self.version = file, novelty, version
-        self._serving = Serving(file.policy)
+        self._serving = Serving(file.policy, novelty)
         self._epsilon = self.epsilon
         self._low_values.clear()
         if self.mode == "empty":
@@ -182,7 +181,7 @@ class Governor:
     def act(
         self, observation: Float32, seq: int, sent_ns: int, now_ns: int, applied: Float32 | None = None
     ) -> Decision:
-        """Decide on one query.
+        """Decide on one query. The caller silences NumPy's warnings of overflow, since any values may come.
 
         Args:
             observation: (n,) float32, finite or not.
@@ -213,8 +212,12 @@ class Governor:
         proposed = None
         self.novelty = 1.0
         if seen and self._serving is not None:
-            with np.errstate(over="ignore", invalid="ignore"):
-                proposed = self._propose(self._serving)
+            p_value = self._serving.look(self._observed, self._acted)
+            proposed = self._serving.propose()
+            if self._novelty is not None and self._epsilon < 1.0:
+                self._judge(p_value)
+            if proposed is None and self.mode == "armed":
+                self.latch(Reason.OUTPUT)
         changed = 0
         if proposed is not None and self.mode == "armed":
             limited = limit(self._limits, proposed, self._previous, values, self._guards)
@@ -248,21 +251,12 @@ class Governor:
             self._acted.push(self._previous)
         self._fallback.see(values, now_ns)
 
-    def _propose(self, serving: Serving) -> Float32 | None:
-        """Return the policy's action (m,) if it is finite; look at the novelty on the way."""
-        serving.look(self._observed, self._acted)
-        self._judge_novelty(serving.window)
-        action = serving.propose()
-        if action is None and self.mode == "armed":
-            self.latch(Reason.OUTPUT)
-        return action
-
-    def _judge_novelty(self, window: Float32) -> None:
-        if self._novelty is None or self._epsilon >= 1.0:
-            return
-        self.novelty = self._novelty.p_value_bare(window)
-        self._low_values.append(self.novelty <= self._epsilon)
-        if sum(self._low_values) >= self.rig.novelty.trip_m:
+    def _judge(self, p_value: float) -> None:
+        """Look at the novelty: so many low values among the last trip."""
+        self.novelty = p_value
+        low = p_value <= self._epsilon
+        self._low_values.append(low)
+        if low and sum(self._low_values) >= self.rig.novelty.trip_m:
             self.counts["novel"] += 1
             if self._gate_trips and self.mode == "armed":
                 self.latch(Reason.NOVEL)

@@ -2,14 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
-from typing import Any, NamedTuple
+from typing import NamedTuple
 
 from nearhand.service.bus.action_messages import Act
+from nearhand.service.bus.codec import decode_flat
 from nearhand.service.bus.message import PROTOCOL_VERSION
 
-FIELDS = {"v", "kind", "rig", "session", "seq", "sent_ns", "obs"}
-FIELDS_APPLIED = FIELDS | {"applied"}
+#: How many fields an ``act`` has besides ``applied``.
+FIELDS = 7
 LIMIT = 2**63
 
 
@@ -29,18 +29,22 @@ def of(message: Act) -> Query:
     return Query(message.rig, message.session, message.seq, message.sent_ns, message.obs, message.applied)
 
 
-def usual(table: Mapping[str, Any]) -> Query | None:
-    """Return the query in a decoded map if it is an ``act`` with vectors of bytes; None leaves it to the model.
+def usual(frame: bytes) -> Query | None:
+    """Return the query in a frame if it is an ``act`` with vectors of bytes; None leaves it to the model.
 
     The names' form is not looked at: a name that is no rig's and no session's is refused later in any case.
     """
-    applied = table.get("applied")
-    if table.keys() != (FIELDS if "applied" not in table else FIELDS_APPLIED):
+    table = decode_flat(frame)
+    if table is None or "applied" not in table and len(table) != FIELDS or len(table) > FIELDS + 1:
         return None
-    version, seq, sent_ns = table["v"], table["seq"], table["sent_ns"]
-    rig, session, obs = table["rig"], table["session"], table["obs"]
+    try:
+        version, seq, sent_ns = table["v"], table["seq"], table["sent_ns"]
+        rig, session, obs, kind = table["rig"], table["session"], table["obs"], table["kind"]
+    except KeyError:
+        return None
+    applied = table.get("applied")
     if (
-        table["kind"] == "act"
+        kind == "act"
         and type(version) is int
         and version == PROTOCOL_VERSION
         and type(rig) is str

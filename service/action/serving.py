@@ -1,4 +1,4 @@
-"""A policy at work: its window and its network in memory that is taken once, so that a query allocates little."""
+"""A policy at work: history, network and confidence gate in memory taken once, so that a query allocates little."""
 
 from __future__ import annotations
 
@@ -7,6 +7,7 @@ import math
 import numpy as np
 
 from nearhand.service.envelope.limits import Float32
+from nearhand.service.envelope.novelty import NoveltyScore
 from nearhand.service.policy.network import Policy
 
 #: As far back as any policy can look.
@@ -46,45 +47,78 @@ class History:
 
 
 class Serving:
-    """One policy, ready to be asked; gives what ``Policy.action`` gives for the same window, but for rounding.
+    """One policy with its confidence gate, ready to be asked.
 
-    The biases stand as last rows of the weights, beside an input that is always 1; the last layer is in action units.
+    It gives what ``Policy.action`` and ``NoveltyScore`` give for the same window, but for rounding. The first layer and
+    the whitening are one matrix that takes raw values, in double precision since these may be of any size; biases stand
+    as last rows beside an input that is always 1; the last layer is in action units.
 
     Args:
         policy: the policy.
+        novelty: its confidence gate, if it has one.
     """
 
-    def __init__(self, policy: Policy) -> None:
-        self._policy = policy
+    def __init__(self, policy: Policy, novelty: NoveltyScore | None = None) -> None:
         n, split = policy.observation_size, policy.observation_size * (1 + policy.past_observations)
-        inputs = np.ones(policy.input_size + 1, dtype=np.float32)
-        inputs[:-1] = 0.0
-        self.window: Float32 = inputs[:-1]
-        self._observed = self.window[:split].reshape(1 + policy.past_observations, n)
-        self._acted = self.window[split:].reshape(policy.past_actions, policy.action_size)
-        weights = [np.vstack(pair) for pair in zip(policy.weights, policy.biases, strict=True)]
-        weights[-1] = weights[-1] * policy.action_half
-        weights[-1][-1] += policy.action_middle
-        self._layers: list[tuple[Float32, Float32, Float32]] = []
-        for weight in weights[:-1]:
+        self._past_observations, self._past_actions = 1 + policy.past_observations, policy.past_actions
+        self._raw = np.ones(policy.input_size + 1)
+        self._observed = self._raw[:split].reshape(self._past_observations, n)
+        self._acted = self._raw[split:-1].reshape(policy.past_actions, policy.action_size)
+        times = (self._past_observations, self._past_actions)
+        self._mean = np.concatenate(
+            [np.tile(*pair) for pair in zip((policy.observation_mean, policy.action_middle), times, strict=True)]
+        )
+        self._scale = np.concatenate(
+            [np.tile(*pair) for pair in zip((policy.observation_scale, policy.action_half), times, strict=True)]
+        )
+        weights = [np.vstack(pair).astype(np.float64) for pair in zip(policy.weights, policy.biases, strict=True)]
+        with np.errstate(over="ignore", invalid="ignore"):
+            weights[-1] *= policy.action_half
+            weights[-1][-1] += policy.action_middle
+        first = weights[0]
+        self._split = first.shape[1]
+        if novelty is not None:
+            first = np.hstack([first, novelty.affine])
+        with np.errstate(over="ignore", invalid="ignore"):
+            first[:-1] /= self._scale.astype(np.float64)[:, None]
+            first[-1] -= self._mean.astype(np.float64) @ first[:-1]
+        self._novelty = novelty
+        self._first = np.ascontiguousarray(first)
+        self._seen = np.zeros(first.shape[1])
+        self._later: list[tuple[Float32, Float32, Float32]] = []
+        inputs = np.ones(self._split + 1, dtype=np.float32)
+        self._hidden = inputs[:-1]
+        for weight in weights[1:-1]:
             outputs = np.ones(weight.shape[1] + 1, dtype=np.float32)
-            self._layers.append((inputs, np.ascontiguousarray(weight, dtype=np.float32), outputs[:-1]))
+            self._later.append((inputs, np.ascontiguousarray(weight, dtype=np.float32), outputs[:-1]))
             inputs = outputs
         self._inputs, self._last = inputs, np.ascontiguousarray(weights[-1], dtype=np.float32)
+        self._deep = len(weights) > 1
 
-    def look(self, observed: History, acted: History) -> None:
-        """Fill the window from the histories of observations and of applied actions."""
-        policy = self._policy
-        np.subtract(observed.newest(len(self._observed)), policy.observation_mean, out=self._observed)
-        np.divide(self._observed, policy.observation_scale, out=self._observed)
-        if len(self._acted):
-            np.subtract(acted.newest(len(self._acted)), policy.action_middle, out=self._acted)
-            np.divide(self._acted, policy.action_half, out=self._acted)
+    @property
+    def window(self) -> Float32:
+        """What was taken in, as the policy was trained to see it, (d,)."""
+        return np.asarray((self._raw[:-1].astype(np.float32) - self._mean) / self._scale, dtype=np.float32)
 
-    def propose(self) -> Float32 | None:
-        """Return the policy's action (m,) for the window, or None if it is not finite."""
-        for inputs, weight, outputs in self._layers:
-            inputs.dot(weight, out=outputs)
-            np.tanh(outputs, out=outputs)
-        action: Float32 = self._inputs.dot(self._last)
-        return action if math.isfinite(sum(action.tolist())) else None
+    def look(self, observed: History, acted: History) -> float:
+        """Take in the histories of observations and of applied actions; return the novelty's p-value, 1 without gate.
+
+        Like ``propose``, it leaves to the caller to silence NumPy's warnings of overflow.
+        """
+        self._observed[:] = observed.newest(self._past_observations)
+        if self._past_actions:
+            self._acted[:] = acted.newest(self._past_actions)
+        self._raw.dot(self._first, out=self._seen)
+        return 1.0 if self._novelty is None else self._novelty.p_of_whitened(self._seen[self._split :])
+
+    def propose(self) -> list[float] | None:
+        """Return the policy's action, m numbers, for what was taken in, or None if it is not finite."""
+        if self._deep:
+            np.tanh(self._seen[: self._split].astype(np.float32), out=self._hidden)
+            for inputs, weight, outputs in self._later:
+                inputs.dot(weight, out=outputs)
+                np.tanh(outputs, out=outputs)
+            action = self._inputs.dot(self._last).tolist()
+        else:
+            action = self._seen[: self._split].astype(np.float32).tolist()
+        return action if math.isfinite(sum(action)) else None

@@ -7,7 +7,7 @@ action towards what it allows as fast as slew lets it; it looks ahead by the tim
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -16,8 +16,7 @@ from nearhand.service.envelope.braking import Guards
 from nearhand.service.envelope.limits import Float32, Limits
 
 
-@dataclass(frozen=True, slots=True)
-class Limited:
+class Limited(NamedTuple):
     """An action (m,) after the chain, and which limits changed it."""
 
     action: Float32
@@ -28,7 +27,7 @@ class Limited:
 
 def limit(
     limits: Limits,
-    proposed: Float32,
+    proposed: list[float] | Float32,
     previous: Float32,
     observation: Sequence[float] | NDArray[np.floating] | None,
     guards: Guards | None = None,
@@ -48,7 +47,7 @@ def limit(
     action: list[float] = []
     clipped = slewed = False
     for wanted, before, (low, high, step, rounding) in zip(
-        proposed.tolist(), previous.tolist(), limits.channels, strict=True
+        proposed if isinstance(proposed, list) else proposed.tolist(), previous.tolist(), limits.channels, strict=True
     ):
         least, most = before - step, before + step
         if least < low:

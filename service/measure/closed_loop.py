@@ -131,7 +131,8 @@ def roll_served(simulator: Simulator, file: PolicyFile, rig: Rig, count: int, se
     def driver(observations: Array, step: int) -> Array:
         now_ns = step * period_ns
         rows = observations.astype(np.float32)
-        return np.array([g.act(row, step, now_ns, now_ns).action for g, row in zip(governors, rows, strict=True)])
+        with np.errstate(over="ignore", invalid="ignore"):
+            return np.array([g.act(row, step, now_ns, now_ns).action for g, row in zip(governors, rows, strict=True)])
 
     result = roll(simulator, driver, count, seed, tick)
     result.counts = [governor.counts for governor in governors]

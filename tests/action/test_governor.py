@@ -40,7 +40,8 @@ class Driver:
         self.seq += 1
         self.now_ns += after_ns
         row = np.asarray(observation, dtype=np.float32)
-        return self.governor.act(row, self.seq, self.now_ns - late_ns, self.now_ns, **changes)
+        with np.errstate(over="ignore", invalid="ignore"):
+            return self.governor.act(row, self.seq, self.now_ns - late_ns, self.now_ns, **changes)
 
 
 def armed(rig: Rig, file: PolicyFile, **options: Any) -> Driver:

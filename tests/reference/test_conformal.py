@@ -107,7 +107,8 @@ def test_fresh_episodes_like_the_demonstrations_trip_as_often_as_promised(genera
 def test_the_distance_is_mahalanobis_with_a_shrunk_covariance(generator: np.random.Generator) -> None:
     mixing = generator.standard_normal((5, 5))
     rows = (generator.standard_normal((800, 5)) @ mixing + 3.0).astype(np.float32)
-    score = NoveltyScore(calibrate(rows, []))
+    tensors = {name: values for name, values in calibrate(rows, []).items() if name not in ("neighbours", "usual")}
+    score = NoveltyScore(tensors)
     standardised = (rows - rows.mean(axis=0, dtype=np.float64)) / rows.std(axis=0, dtype=np.float64)
     fitted = ShrunkCovariance(shrinkage=SHRINKAGE, assume_centered=True).fit(standardised)
     expected = np.sqrt(fitted.mahalanobis(standardised[:50]))
