@@ -26,6 +26,8 @@ from nearhand.service.policy.format import PolicyFile
 from nearhand.service.rigs import Rig
 
 FORM, LATE = int(Reason.FORM), int(Reason.LATE)
+#: What the limits may have done, in the order of ``Limited``.
+LIMITS = tuple((int(reason), str(reason.name).lower()) for reason in (Reason.CLIPPED, Reason.SLEWED, Reason.BRAKED))
 
 
 class Decision(NamedTuple):
@@ -262,14 +264,11 @@ class Governor:
                 self.latch(Reason.NOVEL)
 
     def _intervened(self, limited: Limited) -> int:
+        """Count what the limits changed; return the reasons."""
         flags = 0
-        for changed, reason in (
-            (limited.clipped, Reason.CLIPPED),
-            (limited.slewed, Reason.SLEWED),
-            (limited.braked, Reason.BRAKED),
-        ):
+        for changed, (flag, name) in zip(limited[1:], LIMITS, strict=True):
             if changed:
-                flags |= int(reason)
-                self.counts[str(reason.name).lower()] += 1
+                flags |= flag
+                self.counts[name] += 1
         self.counts["interventions"] += 1
         return flags

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import argparse
 import contextlib
+import gc
 import os
 import secrets
 import sys
@@ -40,6 +41,10 @@ def main() -> int:
         print(f"{utc_now()} failed process=action-server code={error.code} message={error.message!r}", file=sys.stderr)
         context.destroy(linger=0)
         return 1
+    # What is loaded by now stays: a full collection in the middle of a query would be felt.
+    gc.collect()
+    gc.freeze()
+    gc.disable()
     try:
         announce_ready(options.ready_fd)
         server.run(stop)

@@ -4,12 +4,16 @@ from __future__ import annotations
 
 from typing import NamedTuple
 
+import msgpack
+
 from nearhand.service.bus.action_messages import Act
-from nearhand.service.bus.codec import decode_flat
 from nearhand.service.bus.message import PROTOCOL_VERSION
 
 #: How many fields an ``act`` has besides ``applied``.
 FIELDS = 7
+#: First byte of a map of at most fifteen entries, but for the count (MessagePack specification, "map format family").
+FIXMAP = 0x80
+SHORT_FRAME_BYTES = 4096
 LIMIT = 2**63
 
 
@@ -32,19 +36,22 @@ def of(message: Act) -> Query:
 def usual(frame: bytes) -> Query | None:
     """Return the query in a frame if it is an ``act`` with vectors of bytes; None leaves it to the model.
 
-    The names' form is not looked at: a name that is no rig's and no session's is refused later in any case.
+    No hook is called per map, as the codec does to find a key that appears twice: that shows in the count at the
+    frame's start. The names' form is not looked at: a name that is no rig's and no session's is refused later.
     """
-    table = decode_flat(frame)
-    if table is None or "applied" not in table and len(table) != FIELDS or len(table) > FIELDS + 1:
+    count = frame[0] - FIXMAP if frame else 0
+    if not FIELDS <= count <= FIELDS + 1 or len(frame) > SHORT_FRAME_BYTES:
         return None
     try:
+        table = msgpack.unpackb(frame, use_list=False, max_map_len=FIELDS + 1, max_ext_len=0)
         version, seq, sent_ns = table["v"], table["seq"], table["sent_ns"]
         rig, session, obs, kind = table["rig"], table["session"], table["obs"], table["kind"]
-    except KeyError:
+        applied = table["applied"] if count > FIELDS else None
+    except Exception:  # whatever it is, the codec finds words for it
         return None
-    applied = table.get("applied")
     if (
-        kind == "act"
+        len(table) == count
+        and kind == "act"
         and type(version) is int
         and version == PROTOCOL_VERSION
         and type(rig) is str

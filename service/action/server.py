@@ -5,7 +5,7 @@ Blocking sockets in one thread; nothing here waits for the keeper, a trainer or 
 
 from __future__ import annotations
 
-import contextlib
+import gc
 import select
 from collections import Counter
 from collections.abc import Callable
@@ -32,7 +32,9 @@ from nearhand.service.errors import NearhandError, UnknownNameError, WireError
 
 #: Queries taken in a row before the control socket and the watchdogs get their turn.
 BURST = 64
-IDLE_S = 1.0
+#: Longest time between two looks of the watchdogs.
+IDLE_NS = 1_000_000_000
+SEND_MORE = zmq.NOBLOCK | zmq.SNDMORE
 
 Socket = zmq.Socket[bytes]
 
@@ -66,6 +68,7 @@ class ActionServer:
     def __init__(self, context: zmq.Context[Socket], action: str, control: str, clock: Clock, instance: str) -> None:
         self._clock = clock
         self._rigs: dict[str, DrivenRig] = {}
+        self._tick_ns = 0
         self._occurrences = Occurrences()
         self._packer = msgpack.Packer(use_bin_type=True)
         self.counters: Counter[str] = Counter()
@@ -85,42 +88,60 @@ class ActionServer:
     def run(self, stop: Stop) -> None:
         """Serve until told to stop."""
         # Waiting on the library's own descriptors costs half of what its poller does. They tell of a change only once:
-        # a socket is asked until it has nothing, or asked again without waiting.
-        with select.epoll() as ready, np.errstate(over="ignore", invalid="ignore"):
-            for descriptor in (self._action.FD, self._control.FD, stop.fileno()):
-                ready.register(descriptor, select.EPOLLIN)
-            more = False
+        # a socket is served until it has nothing, or asked again without waiting.
+        with select.epoll() as poll, np.errstate(over="ignore", invalid="ignore"):
+            poll.register(stop.fileno(), select.EPOLLIN)
+            lanes = {
+                self._action.getsockopt(zmq.FD): (self._action, self._answer, BURST),
+                self._control.getsockopt(zmq.FD): (self._control, self._carry_out, 1),
+            }
+            for descriptor in lanes:
+                poll.register(descriptor, select.EPOLLIN)
+            unfinished = set(lanes)
             while not stop.stopped:
-                ready.poll(0.0 if more else self._patience_s())
-                more = self._serve(self._action, self._answer, BURST)
-                more |= self._serve(self._control, self._carry_out, 1)
-                now_ns = self._clock.now_ns()
-                for driven in self._rigs.values():
-                    driven.governor.tick(now_ns)
-                    if driven.governor.trips:
-                        self._control_room.collect_trips()
+                for descriptor, _ in poll.poll(0.0 if unfinished else self._patience_s()):
+                    if descriptor in lanes and not self._serve(*lanes[descriptor]):
+                        unfinished.add(descriptor)
+                unfinished = {descriptor for descriptor in unfinished if not self._serve(*lanes[descriptor])}
+                if (now_ns := self._clock.now_ns()) >= self._tick_ns:
+                    self._tick(now_ns)
 
     def _patience_s(self) -> float:
-        """Return how long to sleep: until the next watchdog may have to act."""
-        dues = [due for driven in self._rigs.values() if (due := driven.governor.due_ns()) is not None]
-        if not dues:
-            return IDLE_S
-        return min(max((min(dues) - self._clock.now_ns()) * 1e-9, 0.0) + 1e-3, IDLE_S)
+        return max((self._tick_ns - self._clock.now_ns()) * 1e-9, 0.0)
+
+    def _tick(self, now_ns: int) -> None:
+        """Let the watchdogs look, and settle when they must look again.
+
+        A query only puts a watchdog off, and one that begins to wait waits for its deadline: so none is due before
+        the first of those that wait now, nor before the shortest deadline from now.
+        """
+        self._tick_ns = now_ns + IDLE_NS
+        for driven in self._rigs.values():
+            governor = driven.governor
+            governor.tick(now_ns)
+            due_ns = governor.due_ns()
+            deadline_ns = now_ns + int(driven.rig.timing.deadline_s * 1e9)
+            self._tick_ns = min(self._tick_ns, deadline_ns if due_ns is None else min(due_ns, deadline_ns))
+        self._control_room.collect_trips()
+        gc.collect(1)  # the little that errors leave behind; the process has switched the automatic collection off
 
     @staticmethod
     def _serve(socket: Socket, answer: Callable[[bytes], bytes], most: int) -> bool:
-        """Answer at most so many requests; return whether there may be more."""
+        """Answer at most so many requests; return whether there are no more."""
         for _ in range(most):
             try:
-                parts = socket.recv_multipart(flags=zmq.NOBLOCK)
+                parts = socket.recv_multipart(zmq.NOBLOCK)
             except zmq.Again:
-                return False
+                return True
             head = 2 if len(parts) > 2 and not parts[1] else 1
             reply = answer(parts[head] if len(parts) == head + 1 else b"")
-            # A peer that does not read its replies must not hold up the others.
-            with contextlib.suppress(zmq.ZMQError):
-                socket.send_multipart([*parts[:head], reply], flags=zmq.NOBLOCK)
-        return True
+            try:
+                for part in parts[:head]:
+                    socket.send(part, SEND_MORE)
+                socket.send(reply, zmq.NOBLOCK)
+            except zmq.ZMQError:
+                continue  # a peer that does not read its replies must not hold up the others
+        return False
 
     def _answer(self, frame: bytes) -> bytes:
         seq: object = None
@@ -151,6 +172,8 @@ class ActionServer:
     def _act(self, query: Query) -> bytes:
         driven = self._driven(query.rig)
         decision = driven.act(query)
+        if driven.governor.trips:
+            self._control_room.collect_trips()
         reply = {
             "v": PROTOCOL_VERSION, "kind": "action", "seq": query.seq, "sent_ns": query.sent_ns,
             "action": decision.action.astype(WIRE_DTYPE, copy=False).tobytes(), "mode": decision.mode,
@@ -170,6 +193,7 @@ class ActionServer:
         table: dict[str, Any] = {}
         try:
             table = decode_map(frame)
+            self._tick_ns = 0  # a new rig may have a shorter deadline
             return encode(self._control_room.do(from_map(table, CONTROL_REQUESTS)))
         except NearhandError as error:
             self.counters["control_errors"] += 1

@@ -14,9 +14,6 @@ from nearhand.service.rigs import sentence
 
 MAX_FRAME_BYTES = 8 * 1024 * 1024
 MAX_ITEMS = 100_000
-#: First byte of a map of at most fifteen entries, but for the count (MessagePack specification, "map format family").
-FIXMAP = 0x80
-SHORT_FRAME_BYTES = 4096
 
 
 def encode(message: Message) -> bytes:
@@ -61,21 +58,6 @@ def decode_map(frame: bytes) -> dict[str, Any]:
     if not isinstance(table, dict):
         raise WireError(f"frame holds a {type(table).__name__}; expected a map", code="wire.malformed")
     return table
-
-
-def decode_flat(frame: bytes) -> dict[str, Any] | None:
-    """Return the map in a short frame if it is one of few and plain entries; None leaves it to ``decode_map``.
-
-    Quicker, since no hook is called per map: a key that appears twice shows in the count at the frame's start.
-    """
-    if not 0 < len(frame) <= SHORT_FRAME_BYTES or frame[0] & 0xF0 != FIXMAP:
-        return None
-    try:
-        table = msgpack.unpackb(frame, use_list=False, max_map_len=15, max_ext_len=0)
-    except Exception:
-        return None
-    plain = len(table) == frame[0] & 0x0F and not any(type(value) is dict for value in table.values())
-    return table if plain else None
 
 
 def decode(frame: bytes, kinds: Mapping[str, type[Message]]) -> Message:

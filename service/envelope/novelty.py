@@ -25,7 +25,7 @@ Float32 = NDArray[np.float32]
 SHRINKAGE = 0.05
 SMALLEST_SD = 1e-3
 #: Size of the covering set; a query looks at all of it.
-NEIGHBOURS = 512
+NEIGHBOURS = 256
 #: Windows that it is chosen among.
 CANDIDATES = 10_000
 #: The share of the demonstrations' windows that scores at most 1.
