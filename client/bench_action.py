@@ -1,7 +1,8 @@
 """How long one query takes, beside a bare echo of the same bytes over the same transport in the same run.
 
 Both servers are processes of their own; both are asked by the same kind of client, alternately, so that whatever else
-the machine does meets both alike. What is measured is from sending a ready frame to having the reply's frame.
+the machine does meets both alike: first as fast as they answer, then at 1 kHz while a service trains and takes in
+episodes on the same processors. What is measured is from sending a ready frame to having the reply's frame.
 """
 
 from __future__ import annotations
@@ -14,6 +15,7 @@ import tempfile
 import time
 from collections.abc import Iterator
 from contextlib import contextmanager
+from itertools import islice
 from pathlib import Path
 from typing import Any
 
@@ -21,6 +23,7 @@ import numpy as np
 import zmq
 from numpy.typing import NDArray
 
+from nearhand.client.bench_load import MachineLoad
 from nearhand.service.bus.action_messages import ACTION_REPLIES, Act, Action, Hello, Welcome
 from nearhand.service.bus.arrays import pack
 from nearhand.service.bus.codec import decode, encode
@@ -37,7 +40,10 @@ QUERIES = 6_000
 WARM_UP = 300
 #: Queries to one server before the other has its turn.
 TURN = 25
-GOALS = {"p50 ratio": 1.5, "p99 ratio": 1.5}
+#: On the loaded machine both are asked at this rate, in turns of half a second.
+RATE_HZ = 1_000.0
+LOADED_TURN = 500
+PERCENTILES = (("p50", 50.0), ("p99", 99.0), ("p99.9", 99.9))
 REPLY_TIMEOUT_MS = 5_000
 
 #: The echo: nothing but the transport.
@@ -52,6 +58,7 @@ while True:
 """
 
 Socket = zmq.Socket[bytes]
+Times = dict[str, list[int]]
 
 
 def bench_rig() -> Rig:
@@ -173,19 +180,14 @@ def _action_server(context: zmq.Context[Socket], folder: Path, rig: Rig) -> Iter
         yield address
 
 
-def _frames(rig: Rig) -> list[bytes]:
-    """Return the queries, ready to send."""
+def _queries(rig: Rig, count: int) -> Iterator[bytes]:
+    """Yield queries, stamped as they are taken: observations that move as a machine's do, within their ranges."""
     generator = np.random.default_rng(1)
-    rows = generator.standard_normal((256, OBSERVATIONS)).astype(np.float32)
-    return [
-        encode(
-            Act(
-                rig=rig.name, session="bench", seq=seq, sent_ns=time.monotonic_ns(), obs=pack(rows[seq % len(rows)]),
-                applied=None,
-            )
-        )
-        for seq in range(1, WARM_UP + QUERIES + 1)
-    ]  # fmt: skip
+    phases, rates = generator.uniform(0, 2 * np.pi, (2, OBSERVATIONS))
+    time_s = rig.timing.period_s * np.arange(count)[:, None]
+    rows = np.sin(phases + (0.2 + 0.3 * rates) * time_s) + 0.02 * generator.standard_normal((count, OBSERVATIONS))
+    for seq, row in enumerate(rows, start=1):
+        yield encode(Act(rig=rig.name, session="bench", seq=seq, sent_ns=time.monotonic_ns(), obs=pack(row)))
 
 
 def _ask(socket: Socket, frame: bytes) -> tuple[bytes, int]:
@@ -203,15 +205,21 @@ def _client(context: zmq.Context[Socket], address: str) -> Socket:
     return socket
 
 
-def run() -> dict[str, Any]:
+def run(seconds: float = 60.0) -> dict[str, Any]:
     """Measure; return bench, figures (µs), ratios and targets.
+
+    Args:
+        seconds: how long each of both is asked at 1 kHz on the loaded machine; 0 leaves that part out.
 
     Raises:
         LinkError: a server did not start, or a query was not answered by the armed policy.
     """
     rig = bench_rig()
+    paced = round(seconds * RATE_HZ)
+    queries = _queries(rig, WARM_UP + QUERIES + paced)
     context: zmq.Context[Socket] = zmq.Context()
-    times: dict[str, list[int]] = {"action": [], "echo": []}
+    idle: Times = {"action": [], "echo": []}
+    loaded: Times = {"action": [], "echo": []}
     try:
         with (
             tempfile.TemporaryDirectory(prefix="nearhand-") as folder,
@@ -219,44 +227,94 @@ def run() -> dict[str, Any]:
             _action_server(context, Path(folder), rig) as action_address,
         ):
             sockets = {"action": _client(context, action_address), "echo": _client(context, echo_address)}
-            replies = _measure(rig, sockets, times)
+            _welcome(rig, sockets["action"])
+            replies = _measure(sockets, islice(queries, WARM_UP + QUERIES), idle, TURN, 0.0)
+            if paced:
+                with MachineLoad(Path(folder) / "load") as load:
+                    replies += _measure(sockets, queries, loaded, LOADED_TURN, 1.0 / RATE_HZ)
+                    load.check()
+                    episodes = load.episodes
     except zmq.Again as error:
         raise LinkError(f"no reply within {REPLY_TIMEOUT_MS} ms") from error
     finally:
         context.destroy(linger=0)
     _check(replies)
+    idle = {name: values[WARM_UP:] for name, values in idle.items()}
+    figures, ratios = _compared("", idle)
+    goals: dict[str, tuple[float, float]] = {name: (ratios[name], 1.5) for name in ("p50 ratio", "p99 ratio")}
+    if paced:
+        more, compared = _compared("loaded ", loaded)
+        period_ns = rig.timing.period_s * 1e9
+        late = {name: sum(value > period_ns for value in values) for name, values in loaded.items()}
+        figures |= more | {f"loaded {name} over one period": float(count) for name, count in late.items()}
+        figures["episodes taken in under load"] = float(episodes)
+        ratios |= compared
+        goals |= {name: (compared[name], 1.5) for name in ("loaded p50 ratio", "loaded p99 ratio")}
+        goals["over one period beyond the echo's"] = (float(max(late["action"] - late["echo"], 0)), 0.0)
+    return {
+        "bench": "action-latency",
+        "figures": figures,
+        "ratios": ratios,
+        "targets": {n: {"value": value, "goal": goal, "met": value <= goal} for n, (value, goal) in goals.items()},
+    }
+
+
+def _compared(prefix: str, times: Times) -> tuple[dict[str, float], dict[str, float]]:
+    """Return percentiles of both, µs, and their ratios."""
     figures = {
-        f"{name} {label} (µs)": float(np.percentile(times[name], percent)) / 1e3
-        for name in ("action", "echo")
-        for label, percent in (("p50", 50), ("p90", 90), ("p99", 99))
+        f"{prefix}{name} {label} (µs)": float(np.percentile(values, percent)) / 1e3
+        for name, values in times.items()
+        for label, percent in PERCENTILES
     }
     ratios = {
-        f"{label} ratio": figures[f"action {label} (µs)"] / figures[f"echo {label} (µs)"] for label in ("p50", "p99")
+        f"{prefix}{label} ratio": figures[f"{prefix}action {label} (µs)"] / figures[f"{prefix}echo {label} (µs)"]
+        for label, _ in PERCENTILES
     }
-    targets = {name: {"value": ratios[name], "goal": goal, "met": ratios[name] <= goal} for name, goal in GOALS.items()}
-    return {"bench": "action-latency", "figures": figures, "ratios": ratios, "targets": targets, "queries": QUERIES}
+    return figures, ratios
 
 
-def _measure(rig: Rig, sockets: dict[str, Socket], times: dict[str, list[int]]) -> list[bytes]:
-    """Ask both, in turns, and return the action server's replies."""
+def _welcome(rig: Rig, socket: Socket) -> None:
     hello = Hello(
         rig=rig.name, session="bench", observations=tuple(c.name for c in rig.observations),
         actions=tuple(c.name for c in rig.actions), period_s=rig.timing.period_s,
     )  # fmt: skip
-    welcome, _ = _ask(sockets["action"], encode(hello))
+    welcome, _ = _ask(socket, encode(hello))
     if not isinstance(decode(welcome, ACTION_REPLIES), Welcome):
         raise LinkError(f"the action server did not welcome the session: {decode(welcome, ACTION_REPLIES)!r}")
-    frames = _frames(rig)
+
+
+def _measure(
+    sockets: dict[str, Socket], queries: Iterator[bytes], times: Times, turn: int, every_s: float
+) -> list[bytes]:
+    """Ask the action server in turns, and the echo the same after it; return the action server's replies.
+
+    Args:
+        turn: how many queries before the other has its turn.
+        every_s: least time between two queries; 0 for as soon as the last is answered.
+    """
     replies = []
-    for start in range(0, len(frames), TURN):
-        for name, socket in sockets.items():
-            for frame in frames[start : start + TURN]:
-                reply, taken_ns = _ask(socket, frame)
-                if name == "action":
-                    replies.append(reply)
-                if start >= WARM_UP:
-                    times[name].append(taken_ns)
+    asked: list[bytes] = []
+    while len(asked) == turn or not replies:
+        asked = []
+        due_s = time.monotonic()
+        for frame in islice(queries, turn):
+            asked.append(frame)
+            due_s = _wait_until(due_s) + every_s
+            reply, taken_ns = _ask(sockets["action"], frame)
+            replies.append(reply)
+            times["action"].append(taken_ns)
+        due_s = time.monotonic()
+        for frame in asked:
+            due_s = _wait_until(due_s) + every_s
+            times["echo"].append(_ask(sockets["echo"], frame)[1])
     return replies
+
+
+def _wait_until(due_s: float) -> float:
+    """Sleep until a time that may have passed; return it."""
+    if (early_s := due_s - time.monotonic()) > 0:
+        time.sleep(early_s)
+    return due_s
 
 
 def _check(replies: list[bytes]) -> None:

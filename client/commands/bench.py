@@ -3,23 +3,38 @@
 from __future__ import annotations
 
 import argparse
+import inspect
 from importlib import import_module
 
 from nearhand.client.options import print_json
+from nearhand.service.errors import ConfigError
 
-#: Benchmark → module with ``run() -> dict`` (bench, figures, ratios, targets).
+#: Benchmark → module with ``run(**options) -> dict`` (bench, figures, ratios, targets).
 BENCHES = {"action-latency": "nearhand.client.bench_action"}
+#: What may be told to a benchmark that takes it.
+OPTIONS = ("seconds", "count", "seeds")
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the options of ``bench``."""
     parser.add_argument("name", choices=sorted(BENCHES), help="which benchmark")
+    parser.add_argument("--seconds", type=float, help="how long to measure, where a benchmark can be told")
+    parser.add_argument("--count", type=int, help="how many (injections, decisions, rigs), where it can be told")
+    parser.add_argument("--seeds", type=int, help="how many seeds, where it can be told")
     parser.add_argument("--json", action="store_true", help="print one JSON object and nothing else")
 
 
 def run(options: argparse.Namespace) -> int:
-    """Run ``bench``; exit status 1 if a target is missed."""
-    result = import_module(BENCHES[options.name]).run()
+    """Run ``bench``; exit status 1 if a target is missed.
+
+    Raises:
+        ConfigError: the benchmark does not take an option.
+    """
+    measure = import_module(BENCHES[options.name]).run
+    told = {name: value for name in OPTIONS if (value := getattr(options, name)) is not None}
+    for name in told.keys() - inspect.signature(measure).parameters.keys():
+        raise ConfigError(f"bench {options.name} takes no --{name}", code="config.option")
+    result = measure(**told)
     targets = result.get("targets", {})
     if options.json:
         print_json(result)
