@@ -7,6 +7,11 @@ deadline has passed too, so that the server latches as well (or has been restart
 again and follows the server's fallback; the policy acts again only after an operator has re-armed the server, which
 cannot be done before the server has latched: arming an armed rig changes nothing.
 
+An operator can take the rig over at any moment. From then on the link does what the operator wants, within the same
+magnitude, slew and braking limits, and waits for nobody; the server goes on seeing what happens. That ends the
+policy's permission: after the operator has handed back, the server's fallback acts until someone has re-armed. Whoever
+wants the policy to follow on without a stop re-arms before handing back.
+
 A program that stops calling ``exchange`` cannot be helped from here: the server's deadline catches it, and the drive
 must stop when its commands cease.
 """
@@ -16,19 +21,22 @@ from __future__ import annotations
 import secrets
 import time
 from dataclasses import dataclass
+from typing import Literal
 
 import numpy as np
 import zmq
 from numpy.typing import NDArray
 
-from nearhand.service.bus.action_messages import ACTION_REPLIES, Act, Action, Hello, Mode, Reason, Welcome
+from nearhand.service.bus.action_messages import ACTION_REPLIES, Action, Hello, Mode, Reason, Welcome
 from nearhand.service.bus.arrays import pack, unpack
 from nearhand.service.bus.codec import decode, encode
+from nearhand.service.bus.keys import ClientKey, key_from_environment
 from nearhand.service.bus.message import ErrorReply, Message
+from nearhand.service.bus.queries import pack_query
 from nearhand.service.bus.sockets import ACTION_QUEUE, connect, make_socket
 from nearhand.service.clock import Clock, MonotonicClock
 from nearhand.service.envelope.braking import Guards
-from nearhand.service.envelope.chain import limit
+from nearhand.service.envelope.chain import Limited, limit
 from nearhand.service.envelope.fallback import FallbackAction
 from nearhand.service.envelope.limits import Float32, Limits
 from nearhand.service.errors import WireError
@@ -45,7 +53,8 @@ class Drive:
 
     Attributes:
         action: (m,) float32, finite, within limits and (but for a ``rest`` fallback) within slew.
-        mode: ``armed`` while the policy acts; ``latched`` or ``empty`` while a fallback does.
+        mode: ``armed`` while the policy acts; ``latched`` or ``empty`` while a fallback does; ``taken`` while the
+            operator does.
         version: the version that acts, 0 for none.
         reasons: see :class:`Reason`; LINK when the service gave nothing usable in time.
         novelty: conformal p-value of the observation, 1 when none came.
@@ -54,7 +63,7 @@ class Drive:
     """
 
     action: Float32
-    mode: Mode
+    mode: Mode | Literal["taken"]
     version: int
     reasons: int
     novelty: float
@@ -70,9 +79,22 @@ class RigLink:
         address: of the action lane.
         clock: the rig's monotonic clock.
         wait_s: how long ``exchange`` waits for the reply; one control period by default.
+        key: a key that may drive, where the service has keys; by default the one that ``NEARHAND_KEY`` names.
+
+    Raises:
+        ConfigError: the key cannot be used.
+        LinkError: the address is malformed.
     """
 
-    def __init__(self, rig: Rig, address: str, *, clock: Clock | None = None, wait_s: float | None = None) -> None:
+    def __init__(
+        self,
+        rig: Rig,
+        address: str,
+        *,
+        clock: Clock | None = None,
+        wait_s: float | None = None,
+        key: ClientKey | None = None,
+    ) -> None:
         self._rig = rig
         self._clock = clock or MonotonicClock()
         self._wait_s = rig.timing.period_s if wait_s is None else wait_s
@@ -81,7 +103,7 @@ class RigLink:
         self._fallback = FallbackAction(self._limits)
         self._context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
         self._socket = make_socket(self._context, zmq.DEALER, queue=ACTION_QUEUE, role="connect")
-        connect(self._socket, address)
+        connect(self._socket, address, key or key_from_environment())
         self._session = secrets.token_hex(8)
         self._welcome = False
         self._replaced = False
@@ -93,6 +115,27 @@ class RigLink:
         self._latched = False
         self._silent_until_ns = 0
         self._standing = Reason.NONE
+        self._taken = False
+        self._last_reply: Action | None = None
+
+    @property
+    def taken(self) -> bool:
+        """Whether the operator drives."""
+        return self._taken
+
+    def take_over(self) -> None:
+        """Let the operator drive, from the next exchange on; the policy's lease ends."""
+        self._taken = True
+        self._held_until_ns = None
+        self._fallback.end()
+
+    def hand_back(self) -> None:
+        """End the take-over: from the next exchange on the server is followed again, whatever its mode is then."""
+        self._taken, self._latched = False, False
+        self._fallback.end()
+        if not self._welcome:
+            # A server that was silent meanwhile must have latched before it is asked again.
+            self._silent_until_ns = max(self._silent_until_ns, self._clock.now_ns() + self._silence_ns())
 
     def close(self) -> None:
         """Close the socket; the server will notice the silence."""
@@ -105,10 +148,14 @@ class RigLink:
     def __exit__(self, *exc: object) -> None:
         self.close()
 
-    def exchange(self, observation: NDArray[np.floating]) -> Drive:
+    def exchange(self, observation: NDArray[np.floating], operator: NDArray[np.floating] | None = None) -> Drive:
         """Send an observation (n,) in the rig's units and return what to do for the next control period.
 
         An observation of the wrong size, or one that is no vector of numbers, goes out as NaN: the server trips on it.
+
+        Args:
+            operator: (m,) what the operator wants, looked at only while the operator drives. What is missing, of the
+                wrong size or not finite then counts as no hand on the lever: the fallback acts.
         """
         begin_ns = self._clock.now_ns()
         seen = self._vector(observation)
@@ -116,6 +163,8 @@ class RigLink:
         if usable:
             self._fallback.see(seen, begin_ns)
         self._guards.note(self._held)
+        if self._taken:
+            return self._operated(seen if usable else None, seen, operator, begin_ns)
         reply = None
         if begin_ns >= self._silent_until_ns and not self._replaced:
             reply = self._ask(seen, begin_ns)
@@ -126,8 +175,44 @@ class RigLink:
                 return self._follow(reply, told, seen if usable else None, (now_ns - begin_ns) * 1e-9, now_ns)
         return self._alone(now_ns)
 
-    def _vector(self, observation: NDArray[np.floating]) -> Float32:
-        size = len(self._rig.observations)
+    def _operated(
+        self, observation: Float32 | None, seen: Float32, operator: NDArray[np.floating] | None, now_ns: int
+    ) -> Drive:
+        """Do what the operator wants, within limits, and let the server see it without waiting for its reply."""
+        self._listen()
+        before = self._held
+        wanted = None if operator is None else self._vector(operator, len(self._rig.actions))
+        if wanted is not None and np.isfinite(wanted).all():
+            limited = limit(self._limits, wanted, before, observation, self._guards)
+            self._fallback.end()
+            self._held, flags = limited.action, Reason.TAKEN | _changes(limited)
+        else:
+            self._held = self._fallback.act(before, now_ns)
+            flags = Reason.TAKEN | Reason.FORM
+        if now_ns >= self._silent_until_ns and not self._replaced:
+            if self._welcome:
+                self._query(seen, before, now_ns)
+            else:
+                self._greet(now_ns)
+        reply = self._last_reply
+        novelty, version = (1.0, 0) if reply is None else (reply.novelty, reply.version)
+        return Drive(self._held, "taken", version, int(flags), novelty, False, 0.0)
+
+    def _listen(self) -> None:
+        """Take in what has come, without waiting; a server that no longer knows the session is greeted again."""
+        for _ in range(MOST_MESSAGES):
+            answer = self._receive(0.0)
+            if answer is None:
+                return
+            if isinstance(answer, Welcome) and answer.session == self._session:
+                self._welcome = True
+            elif isinstance(answer, Action):
+                self._last_reply = answer
+            elif isinstance(answer, ErrorReply):
+                self._refused(answer)
+
+    def _vector(self, observation: NDArray[np.floating], size: int = -1) -> Float32:
+        size = len(self._rig.observations) if size < 0 else size
         try:
             with np.errstate(over="ignore", invalid="ignore"):
                 seen = np.asarray(observation, dtype=np.float32)
@@ -147,30 +232,42 @@ class RigLink:
         give_up_s = time.monotonic() + self._wait_s
         if not self._welcome and not self._say_hello(begin_ns, give_up_s):
             return None
-        self._seq += 1
-        message = Act(
-            rig=self._rig.name, session=self._session, seq=self._seq, sent_ns=begin_ns, obs=pack(observation),
-            applied=pack(self._held),
-        )  # fmt: skip
-        if not self._send(message):
+        if not self._query(observation, self._held, begin_ns):
             return None
         for _ in range(MOST_MESSAGES):
             answer = self._receive(give_up_s)
             if isinstance(answer, Action) and answer.seq == self._seq:
                 return answer
             if isinstance(answer, ErrorReply) and answer.seq == self._seq:
-                if answer.code.startswith(("unknown.", "conflict.")):
-                    self._welcome, self._hello_at_ns = False, 0
-                self._replaced = answer.code == "conflict.session"
+                self._refused(answer)
                 return None
             if answer is None:
                 return None
         return None
 
-    def _say_hello(self, begin_ns: int, give_up_s: float) -> bool:
-        if begin_ns >= self._hello_at_ns:
-            self._hello_at_ns = begin_ns + round(HELLO_EVERY_S * 1e9)
-            self._send(
+    def _query(self, observation: Float32, applied: Float32, begin_ns: int) -> bool:
+        """Send one query; tell whether it left."""
+        self._seq += 1
+        return self._send(
+            pack_query(
+                self._rig.name, self._session, self._seq, begin_ns, pack(observation), pack(applied),
+                by_operator=self._taken,
+            )
+        )  # fmt: skip
+
+    def _refused(self, answer: ErrorReply) -> None:
+        """Draw the consequences of the server's refusal."""
+        if answer.code.startswith(("unknown.", "conflict.")):
+            self._welcome, self._hello_at_ns = False, 0
+        self._replaced = answer.code == "conflict.session"
+
+    def _greet(self, begin_ns: int) -> None:
+        """Say hello, but not too often."""
+        if begin_ns < self._hello_at_ns:
+            return
+        self._hello_at_ns = begin_ns + round(HELLO_EVERY_S * 1e9)
+        self._send(
+            encode(
                 Hello(
                     rig=self._rig.name,
                     session=self._session,
@@ -179,6 +276,10 @@ class RigLink:
                     period_s=self._rig.timing.period_s,
                 )
             )
+        )
+
+    def _say_hello(self, begin_ns: int, give_up_s: float) -> bool:
+        self._greet(begin_ns)
         for _ in range(MOST_MESSAGES):
             answer = self._receive(give_up_s)
             if isinstance(answer, Welcome) and answer.session == self._session:
@@ -187,12 +288,12 @@ class RigLink:
                 break
         return self._welcome
 
-    def _send(self, message: Message) -> bool:
+    def _send(self, frame: bytes) -> bool:
         try:
             # Asking whether there is room also makes the library notice room that it has not heard of yet.
             if not self._socket.poll(0, zmq.POLLOUT):
                 return False
-            self._socket.send(encode(message), flags=zmq.NOBLOCK)
+            self._socket.send(frame, flags=zmq.NOBLOCK)
         except zmq.ZMQError:
             return False
         return True
@@ -225,9 +326,7 @@ class RigLink:
             guards = self._guards if reply.mode == "armed" else None
             limited = limit(self._limits, told, self._held, observation, guards)
             action = limited.action
-            flags |= Reason.CLIPPED if limited.clipped else Reason.NONE
-            flags |= Reason.SLEWED if limited.slewed else Reason.NONE
-            flags |= Reason.BRAKED if limited.braked else Reason.NONE
+            flags |= _changes(limited)
         self._latched = False
         self._fallback.end()
         self._held = action
@@ -246,9 +345,19 @@ class RigLink:
             self._welcome = False
             self._session = secrets.token_hex(8)
             if self._held_until_ns is not None:
-                silence_s = self._rig.timing.deadline_s + 2 * self._rig.timing.period_s
-                self._silent_until_ns = now_ns + round(silence_s * 1e9)
+                self._silent_until_ns = now_ns + self._silence_ns()
             self._held_until_ns = None
         self._held = self._fallback.act(self._held, now_ns)
         reasons = Reason.LINK | Reason.LATCHED | self._standing
         return Drive(self._held, "latched", 0, int(reasons), 1.0, False, 0.0)
+
+    def _silence_ns(self) -> int:
+        """Return how long the server must hear nothing to be surely latched."""
+        return round((self._rig.timing.deadline_s + 2 * self._rig.timing.period_s) * 1e9)
+
+
+def _changes(limited: Limited) -> Reason:
+    """Return what the limits changed."""
+    flags = Reason.CLIPPED if limited.clipped else Reason.NONE
+    flags |= Reason.SLEWED if limited.slewed else Reason.NONE
+    return flags | (Reason.BRAKED if limited.braked else Reason.NONE)

@@ -18,7 +18,8 @@ class ServiceSettings(Frozen):
     """What the supervisor hands to each of its processes.
 
     ``action``, ``intake``, ``desk`` and ``feed`` are the public lanes; ``control`` (keeper ↔ action server) and
-    ``progress`` (jobs → keeper) are ipc addresses inside the service.
+    ``progress`` (jobs → keeper) are ipc addresses inside the service. ``keys`` is the folder of keys, None where the
+    service has none and lets in whoever can reach it.
     """
 
     data: Path
@@ -28,6 +29,7 @@ class ServiceSettings(Frozen):
     feed: str
     control: str
     progress: str
+    keys: Path | None = None
 
     @property
     def database(self) -> Path:

@@ -12,6 +12,7 @@ from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import IO
 
+from nearhand.service.bus.keys import KeyFolder
 from nearhand.service.bus.sockets import check_address
 from nearhand.service.clock import utc_now
 from nearhand.service.config import DEFAULT_HOST, DEFAULT_PORTS, ServiceSettings
@@ -49,21 +50,25 @@ def make_settings(
 
     Args:
         data: the data folder; made if it does not exist.
-        host: a loopback host.
+        host: where to listen; a loopback host unless the data folder holds keys.
         ports: port by lane; the defaults where a lane is left out.
         pick_ports: take any free ports instead.
 
     Raises:
-        ConfigError: the host is not loopback, or the folder cannot be made.
+        ConfigError: the host is not loopback and there are no keys, or the folder or its keys cannot be used.
     """
     wanted = {**DEFAULT_PORTS, **(ports or {})}
-    check_address(f"tcp://{host}:1")
+    data = data.resolve()
+    keys = KeyFolder(data / "keys")
+    check_address(f"tcp://{host}:1", keyed=keys.is_there)
+    if keys.is_there:
+        keys.service_key(), keys.table()
     if pick_ports:
         wanted = dict(zip(DEFAULT_PORTS, free_ports(host, len(DEFAULT_PORTS)), strict=True))
-    data = data.resolve()
     run = data / "run"
     try:
         run.mkdir(parents=True, exist_ok=True)
+        run.chmod(0o700)
     except OSError as error:
         raise ConfigError(f"cannot make the data folder {data}: {error}; give another one with --data") from error
     sockets = run
@@ -73,6 +78,7 @@ def make_settings(
         data=data,
         control=f"ipc://{sockets / 'control.ipc'}",
         progress=f"ipc://{sockets / 'progress.ipc'}",
+        keys=keys.path if keys.is_there else None,
         **{lane: f"tcp://{host}:{port}" for lane, port in wanted.items()},
     )
 

@@ -93,7 +93,7 @@ class Control:
         )  # fmt: skip
 
     def _drain(self, message: Drain) -> DrainReply:
-        self.collect_trips()
+        self.collect()
         counters: Mapping[str, int] = {**self._counters, "occurrences_lost": self._occurrences.lost}
         return DrainReply(
             request=message.request,
@@ -103,9 +103,10 @@ class Control:
             counters=dict(counters),
         )
 
-    def collect_trips(self) -> None:
-        """Note the trips that governors have had since the last time."""
+    def collect(self) -> None:
+        """Note what has happened to governors since the last time: trips, and changes of the driver."""
         for name, driven in self._rigs.items():
-            trips = driven.governor.trips
-            while trips:
-                self._occurrences.note(name, "trip", {"reason": trips.popleft(), "version": driven.governor.version})
+            happened = driven.governor.happened
+            while happened:
+                what, reason = happened.popleft()
+                self._occurrences.note(name, what, {"reason": reason, "version": driven.governor.version})

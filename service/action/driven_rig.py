@@ -7,9 +7,9 @@ from typing import Any
 import numpy as np
 
 from nearhand.service.action.governor import Decision, Governor
-from nearhand.service.action.queries import Query
 from nearhand.service.bus.action_messages import Hello, Welcome
 from nearhand.service.bus.arrays import unpack
+from nearhand.service.bus.queries import Query
 from nearhand.service.clock import Clock
 from nearhand.service.errors import ConflictError, UnknownNameError, WireError
 from nearhand.service.rigs import Rig
@@ -85,9 +85,9 @@ class DrivenRig:
             observation = unpack(query.obs, self._n, what="obs")
         except WireError:
             nothing = np.full(self._n, np.nan, dtype=np.float32)
-            self.governor.act(nothing, query.seq, query.sent_ns, now_ns, applied)
+            self.governor.act(nothing, query.seq, query.sent_ns, now_ns, applied, by_operator=query.by_operator)
             raise
-        return self.governor.act(observation, query.seq, query.sent_ns, now_ns, applied)
+        return self.governor.act(observation, query.seq, query.sent_ns, now_ns, applied, by_operator=query.by_operator)
 
     def state(self) -> dict[str, Any]:
         """Return what the keeper shows of the rig."""

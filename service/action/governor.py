@@ -52,7 +52,8 @@ class Governor:
         version: the version in service, 0 for none.
         reasons: why it is not armed.
         counts: queries, trips and interventions by name.
-        trips: names of trips not yet collected by the owner, oldest first.
+        happened: what the owner has not collected yet, oldest first: ("trip", reasons), ("taken", …) when the operator
+            takes the rig over, ("handed-back", "").
     """
 
     def __init__(self, rig: Rig, *, gate_trips: bool = True) -> None:
@@ -74,12 +75,13 @@ class Governor:
         self._low_values: deque[bool] = deque(maxlen=rig.novelty.window_n)
         self._previous = self._limits.rest.copy()
         self._last_seq = -1
+        self._taken = False
         self.mode: Mode = "empty"
         self.version = 0
         self.reasons = Reason.EMPTY
         self.novelty = 1.0
         self.counts: Counter[str] = Counter()
-        self.trips: deque[str] = deque(maxlen=100)
+        self.happened: deque[tuple[str, str]] = deque(maxlen=100)
 
     @property
     def epsilon(self) -> float:
@@ -158,7 +160,7 @@ class Governor:
         """Stop for a reason; the fallback acts from the next query on. An empty rig stays empty."""
         if self.mode == "armed":
             self.counts["trips"] += 1
-            self.trips.append(", ".join(reason_names(int(reason))))
+            self.happened.append(("trip", ", ".join(reason_names(int(reason)))))
         if self.mode != "empty":
             self.mode = "latched"
         self.reasons |= Reason.LATCHED | reason
@@ -172,6 +174,7 @@ class Governor:
             self.latch(Reason.GAP)
         self._watchdog.forget()
         self._previous = self._limits.rest.copy()
+        self._taken = False
         self._fallback.end()
 
     def tick(self, now_ns: int) -> None:
@@ -181,7 +184,14 @@ class Governor:
             self._watchdog.pause()
 
     def act(
-        self, observation: Float32, seq: int, sent_ns: int, now_ns: int, applied: Float32 | None = None
+        self,
+        observation: Float32,
+        seq: int,
+        sent_ns: int,
+        now_ns: int,
+        applied: Float32 | None = None,
+        *,
+        by_operator: bool = False,
     ) -> Decision:
         """Decide on one query. The caller silences NumPy's warnings of overflow, since any values may come.
 
@@ -190,6 +200,8 @@ class Governor:
             seq: must be larger than the last one's.
             sent_ns, now_ns: the rig's clock at sending and ours at receiving.
             applied: (m,) the action that the rig truly holds, if it is not the last one decided.
+            by_operator: the operator has taken the rig over. When that begins, an armed rig latches. While it lasts,
+                nothing is decided and strange observations do not trip: the operator may have gone there on purpose.
         """
         self.counts["queries"] += 1
         if seq <= self._last_seq:
@@ -200,8 +212,10 @@ class Governor:
         wrong = 0
         if self._watchdog.received(sent_ns, now_ns):
             wrong |= LATE
+        if by_operator is not self._taken:
+            self._change_driver(by_operator)
         if applied is not None:
-            self._take_over(applied)
+            self._follow(applied)
         values = observation.tolist() if observation.shape == (self._n,) else [math.nan]
         seen = math.isfinite(sum(values))
         if seen:
@@ -220,6 +234,9 @@ class Governor:
                 self._judge(p_value)
             if proposed is None and self.mode == "armed":
                 self.latch(Reason.OUTPUT)
+        if by_operator:
+            told = int(self.reasons | Reason.TAKEN) | wrong
+            return Decision(self._previous, self.mode, self.version, told, self.novelty)
         changed = 0
         if proposed is not None and self.mode == "armed":
             limited = limit(self._limits, proposed, self._previous, values, self._guards)
@@ -232,7 +249,17 @@ class Governor:
         self._previous = action
         return Decision(action, self.mode, self.version, int(self.reasons) | wrong | changed, self.novelty)
 
-    def _take_over(self, applied: Float32) -> None:
+    def _change_driver(self, by_operator: bool) -> None:
+        """The operator takes over, which ends the policy's permission, or hands back, which does not renew it."""
+        self._taken = by_operator
+        self._fallback.end()
+        self._low_values.clear()
+        if by_operator and self.mode == "armed":
+            self.mode = "latched"
+            self.reasons |= Reason.LATCHED | Reason.OPERATOR
+        self.happened.append(("taken", self.mode) if by_operator else ("handed-back", self.mode))
+
+    def _follow(self, applied: Float32) -> None:
         """Take ``applied`` for the action in force, if it is one."""
         if applied.shape == (self._m,) and bool(
             ((applied >= self._barely_low) & (applied <= self._barely_high)).all()  # NaN is neither
@@ -260,7 +287,7 @@ class Governor:
         self._low_values.append(low)
         if low and sum(self._low_values) >= self.rig.novelty.trip_m:
             self.counts["novel"] += 1
-            if self._gate_trips and self.mode == "armed":
+            if self._gate_trips and self.mode == "armed" and not self._taken:
                 self.latch(Reason.NOVEL)
 
     def _intervened(self, limited: Limited) -> int:

@@ -13,6 +13,8 @@ from pathlib import Path
 import zmq
 
 from nearhand.service.action.server import ActionServer
+from nearhand.service.bus.admission import Admission
+from nearhand.service.bus.keys import KeyFolder
 from nearhand.service.clock import MonotonicClock, utc_now
 from nearhand.service.config import read_settings
 from nearhand.service.errors import NearhandError
@@ -36,7 +38,8 @@ def main() -> int:
     context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
     try:
         settings = read_settings(options.settings)
-        server = ActionServer(context, settings.action, settings.control, MonotonicClock(), secrets.token_hex(8))
+        door = None if settings.keys is None else Admission(context, KeyFolder(settings.keys))
+        server = ActionServer(context, settings.action, settings.control, MonotonicClock(), secrets.token_hex(8), door)
     except NearhandError as error:
         print(f"{utc_now()} failed process=action-server code={error.code} message={error.message!r}", file=sys.stderr)
         context.destroy(linger=0)
@@ -50,6 +53,8 @@ def main() -> int:
         server.run(stop)
     finally:
         server.close()
+        if door is not None:
+            door.close()
         context.term()
     return 0
 

@@ -16,16 +16,18 @@ import numpy as np
 import zmq
 from pydantic import ValidationError
 
-from nearhand.service.action import queries
 from nearhand.service.action.control import Control
 from nearhand.service.action.driven_rig import DrivenRig
-from nearhand.service.action.queries import Query
+from nearhand.service.action.keyed import KeyedLane
 from nearhand.service.action.records import Occurrences
+from nearhand.service.bus import queries
 from nearhand.service.bus.action_messages import ACTION_REQUESTS, Act, Hello
+from nearhand.service.bus.admission import Admission
 from nearhand.service.bus.arrays import WIRE_DTYPE
 from nearhand.service.bus.codec import decode_map, encode, from_map
 from nearhand.service.bus.control_messages import CONTROL_REQUESTS
 from nearhand.service.bus.message import PROTOCOL_VERSION, ErrorReply
+from nearhand.service.bus.queries import Query
 from nearhand.service.bus.sockets import ACTION_QUEUE, BULK_QUEUE, bind, make_socket
 from nearhand.service.clock import Clock
 from nearhand.service.errors import NearhandError, UnknownNameError, WireError
@@ -37,6 +39,7 @@ IDLE_NS = 1_000_000_000
 SEND_MORE = zmq.NOBLOCK | zmq.SNDMORE
 
 Socket = zmq.Socket[bytes]
+Receive = Callable[[int], list[bytes]]
 
 
 class Stop(Protocol):
@@ -60,12 +63,21 @@ class ActionServer:
         action, control: addresses to bind.
         clock: the receiver's clock.
         instance: identifier of this process' life.
+        admission: the door that the action lane stands behind, where the service has keys.
 
     Raises:
         ConfigError: an address cannot be bound.
     """
 
-    def __init__(self, context: zmq.Context[Socket], action: str, control: str, clock: Clock, instance: str) -> None:
+    def __init__(
+        self,
+        context: zmq.Context[Socket],
+        action: str,
+        control: str,
+        clock: Clock,
+        instance: str,
+        admission: Admission | None = None,
+    ) -> None:
         self._clock = clock
         self._rigs: dict[str, DrivenRig] = {}
         self._tick_ns = 0
@@ -76,6 +88,11 @@ class ActionServer:
         self._action = make_socket(context, zmq.ROUTER, queue=ACTION_QUEUE, role="bind")
         # The library hears about once a millisecond that replies have left: a short queue would drop the next ones.
         self._action.setsockopt(zmq.SNDHWM, BULK_QUEUE)
+        self._receive: Receive = self._action.recv_multipart
+        self._reply_to = self._answer
+        if admission is not None:
+            keyed = KeyedLane(admission, self._action, self._answer, self._occurrences, self.counters)
+            self._receive, self._reply_to = keyed.receive, keyed.answer
         self.address = bind(self._action, action)
         self._control = make_socket(context, zmq.ROUTER, queue=BULK_QUEUE, role="bind")
         bind(self._control, control)
@@ -92,8 +109,8 @@ class ActionServer:
         with select.epoll() as poll, np.errstate(over="ignore", invalid="ignore"):
             poll.register(stop.fileno(), select.EPOLLIN)
             lanes = {
-                self._action.getsockopt(zmq.FD): (self._action, self._answer, BURST),
-                self._control.getsockopt(zmq.FD): (self._control, self._carry_out, 1),
+                self._action.getsockopt(zmq.FD): (self._action, self._receive, self._reply_to, BURST),
+                self._control.getsockopt(zmq.FD): (self._control, self._control.recv_multipart, self._carry_out, 1),
             }
             for descriptor in lanes:
                 poll.register(descriptor, select.EPOLLIN)
@@ -122,15 +139,15 @@ class ActionServer:
             due_ns = governor.due_ns()
             deadline_ns = now_ns + int(driven.rig.timing.deadline_s * 1e9)
             self._tick_ns = min(self._tick_ns, deadline_ns if due_ns is None else min(due_ns, deadline_ns))
-        self._control_room.collect_trips()
+        self._control_room.collect()
         gc.collect(1)  # the little that errors leave behind; the process has switched the automatic collection off
 
     @staticmethod
-    def _serve(socket: Socket, answer: Callable[[bytes], bytes], most: int) -> bool:
+    def _serve(socket: Socket, receive: Receive, answer: Callable[[bytes], bytes], most: int) -> bool:
         """Answer at most so many requests; return whether there are no more."""
         for _ in range(most):
             try:
-                parts = socket.recv_multipart(zmq.NOBLOCK)
+                parts = receive(zmq.NOBLOCK)
             except zmq.Again:
                 return True
             head = 2 if len(parts) > 2 and not parts[1] else 1
@@ -172,8 +189,8 @@ class ActionServer:
     def _act(self, query: Query) -> bytes:
         driven = self._driven(query.rig)
         decision = driven.act(query)
-        if driven.governor.trips:
-            self._control_room.collect_trips()
+        if driven.governor.happened:
+            self._control_room.collect()
         reply = {
             "v": PROTOCOL_VERSION, "kind": "action", "seq": query.seq, "sent_ns": query.sent_ns,
             "action": decision.action.astype(WIRE_DTYPE, copy=False).tobytes(), "mode": decision.mode,

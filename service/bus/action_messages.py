@@ -30,6 +30,7 @@ class Reason(IntFlag):
     OPERATOR = 2048  #: an operator stopped it, or has not armed it yet
     EMPTY = 4096  #: no version is in service
     LINK = 8192  #: set by the rig-side link: no usable reply in time
+    TAKEN = 16384  #: the operator drives: they have taken the rig over
 
 
 def reason_names(flags: int) -> list[str]:
@@ -67,6 +68,7 @@ class Act(Message):
 
     ``sent_ns`` is the rig's monotonic clock; it comes back unchanged. ``applied`` is the action the rig truly holds
     (its own fallback may have acted), so that slew starts from there; left out, the last reply is taken for it.
+    ``by_operator``: the operator has taken the rig over and drives it; the reply's action is not followed.
     """
 
     lane: ClassVar[str] = "action"
@@ -77,6 +79,7 @@ class Act(Message):
     sent_ns: Count
     obs: RawVector
     applied: RawVector | None = None
+    by_operator: bool = False
 
 
 class Action(Message):

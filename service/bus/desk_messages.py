@@ -13,9 +13,13 @@ JobState = Literal["queued", "running", "done", "failed", "cancelled"]
 
 
 class DeskRequest(Message):
-    """Base of desk requests; ``request`` comes back in the reply."""
+    """Base of desk requests; ``request`` comes back in the reply.
+
+    ``role`` is what a key needs for it, where the service has keys; an empty one means that any key will do.
+    """
 
     lane: ClassVar[str] = "desk"
+    role: ClassVar[str] = "view"
     request: Identifier
 
 
@@ -29,6 +33,7 @@ class DeskReply(Message):
 class Deed(DeskRequest):
     """Base of requests that change something: who does it and why go to the event record."""
 
+    role: ClassVar[str] = "release"
     who: Label = Field(min_length=1)
     why: Text = ""
 
@@ -36,6 +41,7 @@ class Deed(DeskRequest):
 class Where(DeskRequest):
     """Ask for the four lanes' addresses and the service's version."""
 
+    role: ClassVar[str] = ""
     kind: str = "where"
 
 
@@ -49,8 +55,12 @@ class WhereReply(DeskReply):
 
 
 class PutRig(Deed):
-    """Register a rig or replace its description (TOML text); an identical one changes nothing."""
+    """Register a rig or replace its description (TOML text); an identical one changes nothing.
 
+    To change a rig that is known already, a key needs the role ``release``.
+    """
+
+    role: ClassVar[str] = "teach"
     kind: str = "put-rig"
     toml: str = Field(max_length=262_144)
 
@@ -121,6 +131,7 @@ class StartJob(Deed):
     ``inspect``: none.
     """
 
+    role: ClassVar[str] = "teach"
     kind: str = "start-job"
     job_kind: JobKind
     rig: Identifier
@@ -133,6 +144,7 @@ class GetJob(DeskRequest):
 
 
 class CancelJob(Deed):
+    role: ClassVar[str] = "teach"
     kind: str = "cancel-job"
     job: Count
 
@@ -241,13 +253,15 @@ class ReleaseReply(DeskReply):
 class Rearm(Deed):
     """Clear a latched trip. It permits action; the machine moves only when the rig asks again."""
 
+    role: ClassVar[str] = "drive"
     kind: str = "rearm"
     rig: Identifier
 
 
 class Halt(Deed):
-    """Latch a rig now: the fallback acts until an operator re-arms."""
+    """Latch a rig now: the fallback acts until an operator re-arms. Whoever holds a key may do it."""
 
+    role: ClassVar[str] = ""
     kind: str = "halt"
     rig: Identifier
 

@@ -11,6 +11,7 @@ from urllib.parse import urlsplit
 import zmq
 
 from nearhand.service.bus.codec import MAX_FRAME_BYTES
+from nearhand.service.bus.keys import ClientKey
 from nearhand.service.errors import ConfigError, LinkError
 
 HEARTBEAT_MS = 2_000
@@ -43,12 +44,12 @@ def make_socket(context: zmq.Context[zmq.Socket[bytes]], kind: int, *, queue: in
 
 
 def bind(socket: zmq.Socket[bytes], address: str) -> str:
-    """Bind to a loopback or ipc address and return the address in force (a port of ``*`` becomes a number).
+    """Bind and return the address in force (a port of ``*`` becomes a number).
 
     Raises:
-        ConfigError: the address is neither loopback nor ipc, or is taken.
+        ConfigError: the address is taken, or neither loopback nor ipc while the socket asks for no keys.
     """
-    check_address(address)
+    check_address(address, keyed=bool(socket.getsockopt(zmq.CURVE_SERVER)))
     try:
         socket.bind(address)
     except zmq.ZMQError as error:
@@ -59,12 +60,16 @@ def bind(socket: zmq.Socket[bytes], address: str) -> str:
     return socket.getsockopt_string(zmq.LAST_ENDPOINT).rstrip("\x00")
 
 
-def connect(socket: zmq.Socket[bytes], address: str) -> None:
-    """Connect; the other end need not be there yet.
+def connect(socket: zmq.Socket[bytes], address: str, key: ClientKey | None = None) -> None:
+    """Connect, with a key if the service asks for one; the other end need not be there yet.
 
     Raises:
         LinkError: the address is malformed.
     """
+    if key is not None:
+        socket.setsockopt(zmq.CURVE_SECRETKEY, key.secret.encode())
+        socket.setsockopt(zmq.CURVE_PUBLICKEY, key.public.encode())
+        socket.setsockopt(zmq.CURVE_SERVERKEY, key.service.encode())
     try:
         socket.connect(address)
     except zmq.ZMQError as error:
@@ -73,8 +78,8 @@ def connect(socket: zmq.Socket[bytes], address: str) -> None:
         ) from error
 
 
-def check_address(address: str) -> None:
-    """Refuse to listen anywhere but on loopback or ipc.
+def check_address(address: str, *, keyed: bool = False) -> None:
+    """Refuse to listen anywhere but on loopback or ipc, unless keys are asked for.
 
     Raises:
         ConfigError: the reason and what to do.
@@ -87,8 +92,12 @@ def check_address(address: str) -> None:
         loopback = host == "localhost" or ipaddress.ip_address(host).is_loopback
     except ValueError:
         loopback = False
-    if parts.scheme != "tcp" or not loopback:
-        raise ConfigError(
-            f"{address} is refused: without keys the service listens on loopback only (tcp://127.0.0.1:PORT or ipc://)",
-            code="config.address",
-        )
+    if parts.scheme == "tcp" and (loopback or (keyed and host)):
+        return
+    if keyed:
+        raise ConfigError(f"{address} is refused; expected tcp://HOST:PORT or ipc://PATH", code="config.address")
+    raise ConfigError(
+        f"{address} is refused: without keys the service listens on loopback only (tcp://127.0.0.1:PORT or ipc://); "
+        "make keys with `nearhand keys new NAME --roles …` and start it again",
+        code="config.address",
+    )

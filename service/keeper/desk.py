@@ -6,7 +6,7 @@ import traceback
 from typing import Any
 
 from nearhand.service.bus.codec import decode_map, from_map
-from nearhand.service.bus.desk_messages import DESK_REQUESTS
+from nearhand.service.bus.desk_messages import DESK_REQUESTS, DeskRequest
 from nearhand.service.bus.message import Message
 from nearhand.service.errors import NearhandError
 from nearhand.service.keeper import episode_room, job_room, record_room, rig_room, version_room
@@ -45,7 +45,10 @@ class Desk:
         table: dict[str, Any] | None = None
         try:
             table = decode_map(request.frame())
+            self._office.access.begin("desk", request)
             message = from_map(table, DESK_REQUESTS)
+            assert isinstance(message, DeskRequest)
+            self._office.access.require(message.role, "desk", message.kind)
             return ROOMS[message.kind](self._office, message)
         except NearhandError as error:
             counters["desk.errors"] += 1

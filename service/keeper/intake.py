@@ -15,6 +15,7 @@ from nearhand.service.bus.intake_messages import INTAKE_REQUESTS, Ack, Chunk, Cl
 from nearhand.service.bus.message import Message
 from nearhand.service.clock import Clock
 from nearhand.service.errors import ConflictError, NearhandError, StoreError, WireError
+from nearhand.service.keeper.access import Access
 from nearhand.service.keeper.credit import Credit
 from nearhand.service.keeper.lane import Lane, Request, error_reply
 from nearhand.service.keeper.ledger import Ledger, log_line
@@ -31,12 +32,14 @@ class Intake:
         ledger: where they are stored.
         lane: where they arrive.
         clock: for the credit.
+        access: what the key of the present request may do.
     """
 
-    def __init__(self, ledger: Ledger, lane: Lane, clock: Clock) -> None:
+    def __init__(self, ledger: Ledger, lane: Lane, clock: Clock, access: Access) -> None:
         self._ledger = ledger
         self._lane = lane
         self._credit = Credit(clock)
+        self._access = access
 
     def serve(self) -> int:
         """Store and answer what waits, up to a bound; return how many requests that were."""
@@ -69,7 +72,9 @@ class Intake:
         try:
             frame = request.frame()
             table = decode_map(frame)
+            self._access.begin("intake", request)
             message = from_map(table, INTAKE_REQUESTS)
+            self._access.require("teach", "intake", message.kind)
             with self._ledger.transaction():
                 return self._ack(self._do(message), len(frame))
         except StoreError:

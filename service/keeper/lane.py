@@ -10,6 +10,7 @@ from typing import Any
 
 import zmq
 
+from nearhand.service.bus.admission import Admission, bearer
 from nearhand.service.bus.codec import MAX_FRAME_BYTES, encode
 from nearhand.service.bus.message import ErrorReply, Message
 from nearhand.service.bus.sockets import bind, make_socket
@@ -22,10 +23,14 @@ _IDENTIFIER = re.compile(r"[A-Za-z0-9][A-Za-z0-9._-]{0,63}")
 
 @dataclass(frozen=True, slots=True)
 class Request:
-    """One request; ``envelope`` goes in front of the reply, ``frames`` are what the client sent after it."""
+    """One request; ``envelope`` goes in front of the reply, ``frames`` are what the client sent after it.
+
+    ``bearer`` is the public key of the connection that it came over, empty where the service has no keys.
+    """
 
     envelope: tuple[bytes, ...]
     frames: tuple[bytes, ...]
+    bearer: str = ""
 
     def frame(self) -> bytes:
         """Return the message's frame.
@@ -43,25 +48,43 @@ class Lane:
 
     Args:
         queue: most requests held per client; a client that sends more is held back.
+        admission: the door that it stands behind, where the service has keys.
+        name: the lane's name, at the door.
 
     Raises:
-        ConfigError: the address is taken or not loopback.
+        ConfigError: the address is taken, or not loopback while there are no keys.
     """
 
-    def __init__(self, context: zmq.Context[zmq.Socket[bytes]], address: str, *, queue: int) -> None:
+    def __init__(
+        self,
+        context: zmq.Context[zmq.Socket[bytes]],
+        address: str,
+        *,
+        queue: int,
+        admission: Admission | None = None,
+        name: str = "",
+    ) -> None:
         self.socket = make_socket(context, zmq.ROUTER, queue=queue, role="bind")
+        self._keyed = admission is not None
+        if admission is not None:
+            admission.guard(self.socket, name)
         # Replies to a whole batch go out at once; a router drops what is over its limit without a word.
         self.socket.setsockopt(zmq.SNDHWM, REPLY_QUEUE)
         self.address = bind(self.socket, address)
 
     def receive(self) -> Request | None:
         """Return the next waiting request, or None."""
+        public = ""
         try:
-            parts = self.socket.recv_multipart(flags=zmq.NOBLOCK)
+            if self._keyed:
+                frames = self.socket.recv_multipart(flags=zmq.NOBLOCK, copy=False)
+                parts, public = [frame.bytes for frame in frames], bearer(frames[-1])
+            else:
+                parts = self.socket.recv_multipart(flags=zmq.NOBLOCK)
         except zmq.Again:
             return None
         head = 2 if len(parts) > 2 and not parts[1] else 1
-        return Request(envelope=tuple(parts[:head]), frames=tuple(parts[head:]))
+        return Request(envelope=tuple(parts[:head]), frames=tuple(parts[head:]), bearer=public)
 
     def reply(self, request: Request, message: Message) -> None:
         """Send the reply; one that cannot be sent as a frame becomes an error that says so."""

@@ -10,11 +10,13 @@ from typing import Any
 
 import zmq
 
+from nearhand.service.bus.admission import Admission
 from nearhand.service.bus.codec import encode
 from nearhand.service.bus.feed_messages import Event
 from nearhand.service.bus.message import Message
 from nearhand.service.bus.sockets import BULK_QUEUE, bind, make_socket
 from nearhand.service.clock import utc_now
+from nearhand.service.errors import ConfigError
 from nearhand.service.store.events import EventRow
 from nearhand.service.store.store import Store
 
@@ -25,20 +27,65 @@ def log_line(text: str) -> None:
 
 
 class Feed:
-    """The feed lane's sending end: topic and message, dropped for whoever does not keep up."""
+    """The feed lane's sending end: topic and message, dropped for whoever does not keep up.
 
-    def __init__(self, context: zmq.Context[zmq.Socket[bytes]], address: str) -> None:
-        self._socket = make_socket(context, zmq.PUB, queue=BULK_QUEUE, role="bind")
-        self.address = bind(self._socket, address)
+    Args:
+        admission: the door that it stands behind, where the service has keys.
+
+    Raises:
+        ConfigError: the address is taken, or not loopback while there are no keys.
+    """
+
+    def __init__(
+        self, context: zmq.Context[zmq.Socket[bytes]], address: str, admission: Admission | None = None
+    ) -> None:
+        self._context = context
+        self._admission = admission
+        self._may_see = self._granted()
+        self._socket = self._bound(address)
+        self.address = self._socket.getsockopt_string(zmq.LAST_ENDPOINT).rstrip("\x00")
 
     def publish(self, message: Message) -> None:
         """Send a message to all subscribers of its kind."""
+        if self._socket.closed:
+            return
         with contextlib.suppress(zmq.Again):
             self._socket.send_multipart([message.kind.encode(), encode(message)], flags=zmq.NOBLOCK)
+
+    def turn(self) -> None:
+        """Begin afresh when a key has lost the right to see: a subscriber asks once and then only listens.
+
+        The others come back through the door by themselves; what is published meanwhile is lost to them.
+        """
+        if self._admission is None:
+            return
+        may_see = self._granted()
+        if self._may_see - may_see and not self._socket.closed:
+            self._socket.close(linger=0)
+        self._may_see = may_see
+        if self._socket.closed:
+            # The library lets go of the address in its own time: then the next turn tries again.
+            with contextlib.suppress(ConfigError):
+                self._socket = self._bound(self.address)
 
     def close(self) -> None:
         """Close the socket."""
         self._socket.close(linger=0)
+
+    def _granted(self) -> frozenset[str]:
+        granted = {} if self._admission is None else self._admission.granted
+        return frozenset(public for public, (_, roles) in granted.items() if "view" in roles)
+
+    def _bound(self, address: str) -> zmq.Socket[bytes]:
+        socket = make_socket(self._context, zmq.PUB, queue=BULK_QUEUE, role="bind")
+        if self._admission is not None:
+            self._admission.guard(socket, "feed")
+        try:
+            bind(socket, address)
+        except ConfigError:
+            socket.close(linger=0)
+            raise
+        return socket
 
 
 class Ledger:
@@ -48,12 +95,14 @@ class Ledger:
         store: the records.
         feed: the feed lane.
         counters: what has happened since the start, by name.
+        key: name of the key whose request is being answered; it stands in the events that follow from it.
     """
 
     def __init__(self, store: Store, feed: Feed) -> None:
         self.store = store
         self.feed = feed
         self.counters: Counter[str] = Counter()
+        self.key = ""
         self._unpublished: list[EventRow] = []
 
     @contextlib.contextmanager
@@ -76,7 +125,8 @@ class Ledger:
         self, what: str, *, who: str, why: str = "", rig: str = "", detail: Mapping[str, Any] | None = None
     ) -> EventRow:
         """Append an event within a transaction."""
-        row = self.store.events.append(what, rig=rig, who=who, why=why, detail=detail)
+        told = {**(detail or {}), "key": self.key} if self.key else detail
+        row = self.store.events.append(what, rig=rig, who=who, why=why, detail=told)
         self._unpublished.append(row)
         return row
 

@@ -9,6 +9,7 @@ from typing import Any
 
 from nearhand.service.bus.desk_messages import DeskReply
 from nearhand.service.config import ServiceSettings
+from nearhand.service.keeper.access import Access
 from nearhand.service.keeper.action_server import ActionServer
 from nearhand.service.keeper.job_queue import JobQueue
 from nearhand.service.keeper.ledger import Ledger
@@ -21,6 +22,7 @@ class Office:
     Attributes:
         settings: with the lanes' addresses in force.
         started_s: monotonic time of the keeper's start.
+        access: what the key of the present request may do.
     """
 
     ledger: Ledger
@@ -28,6 +30,7 @@ class Office:
     queue: JobQueue
     settings: ServiceSettings
     started_s: float
+    access: Access
 
 
 #: A room answers requests of its subject: request kind → function.

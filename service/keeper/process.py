@@ -10,9 +10,12 @@ from pathlib import Path
 
 import zmq
 
+from nearhand.service.bus.admission import Admission
+from nearhand.service.bus.keys import KeyFolder
 from nearhand.service.clock import MonotonicClock
 from nearhand.service.config import ServiceSettings, read_settings
 from nearhand.service.errors import NearhandError, StoreError
+from nearhand.service.keeper.access import Access
 from nearhand.service.keeper.action_server import ActionServer
 from nearhand.service.keeper.desk import Desk
 from nearhand.service.keeper.intake import Intake
@@ -43,15 +46,20 @@ class Keeper:
         self._context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
         self._poller = zmq.Poller()
         self.store = Store(settings.database)
-        feed = Feed(self._context, settings.feed)
+        door = self._door = None if settings.keys is None else Admission(self._context, KeyFolder(settings.keys))
+        feed = self._feed = Feed(self._context, settings.feed, door)
         ledger = Ledger(self.store, feed)
-        self._intake_lane = Lane(self._context, settings.intake, queue=INTAKE_QUEUE)
-        self._desk_lane = Lane(self._context, settings.desk, queue=DESK_QUEUE)
+        self._access = Access(door, ledger)
+        self._intake_lane = Lane(
+            self._context, settings.intake, queue=INTAKE_QUEUE, admission=door, name="intake"
+        )
+        self._desk_lane = Lane(self._context, settings.desk, queue=DESK_QUEUE, admission=door, name="desk")
         self._server = ActionServer(ledger, self._context, settings.control)
         self._queue = JobQueue(ledger, settings, self._context, self._poller)
         lanes = {"intake": self._intake_lane.address, "desk": self._desk_lane.address, "feed": feed.address}
-        office = Office(ledger, self._server, self._queue, settings.model_copy(update=lanes), time.monotonic())
-        self._intake = Intake(ledger, self._intake_lane, MonotonicClock())
+        in_force = settings.model_copy(update=lanes)
+        office = Office(ledger, self._server, self._queue, in_force, time.monotonic(), self._access)
+        self._intake = Intake(ledger, self._intake_lane, MonotonicClock(), self._access)
         self._desk = Desk(office, self._desk_lane)
         for socket in (self._intake_lane.socket, self._desk_lane.socket, self._server.socket, self._queue.socket):
             self._poller.register(socket, zmq.POLLIN)
@@ -69,8 +77,11 @@ class Keeper:
         """Do what is due; return whether more may be waiting."""
         try:
             served = self._desk.serve() + self._intake.serve()
+            self._access.end()
             self._server.turn()
             self._queue.turn()
+            self._feed.turn()
+            self._access.turn()
         except StoreError as error:
             log_line(f"keeper-failed code={error.code} message={error.message!r}")
             time.sleep(0.1)
@@ -81,6 +92,8 @@ class Keeper:
         """End the running job's process and close the store and all sockets."""
         self._queue.stop()
         self.store.close()
+        if self._door is not None:
+            self._door.close()
         self._context.destroy(linger=100)
 
 

@@ -20,6 +20,7 @@ def put_rig(office: Office, request: PutRig) -> RigReply:
     Raises:
         ConfigError: the text does not describe a rig.
         ConflictError: other channels than the rig's episodes and versions have.
+        RefusedError: a known rig would change, and the key has not the role ``release``.
     """
     rig = rig_from_toml(request.toml)
     rigs = office.ledger.store.rigs
@@ -34,6 +35,8 @@ def put_rig(office: Office, request: PutRig) -> RigReply:
             f"{_channels(rig)}; give the changed machine a name of its own",
             code="conflict.channels",
         )
+    if known is not None:
+        office.access.require("release", "desk", "changing a rig that is known")
     candidate = RigRow(rig=rig, digest=rig.digest(), toml=request.toml, put_utc="")
     loaded = False
     if office.server.reachable:

@@ -97,7 +97,7 @@ def test_a_malformed_observation_trips_and_stays_tripped(rig_with: RigWith, file
     for _ in range(50):
         after = driver.ask()
     assert after.mode == "latched" and after.action == pytest.approx([0.0, 0.25])
-    assert list(driver.governor.trips) == ["form"]
+    assert list(driver.governor.happened) == [("trip", "form")]
 
 
 def test_a_gap_latches_even_before_the_next_query(rig_with: RigWith, file_with: FileWith) -> None:
@@ -182,7 +182,7 @@ def test_novelty_trips_m_of_n_latches_and_can_be_rearmed(rig_with: RigWith, file
     driver.governor.arm()
     assert driver.ask(strange).mode == "armed"
     assert driver.ask(strange).mode == "latched"
-    assert list(driver.governor.trips) == ["novel", "novel"]
+    assert list(driver.governor.happened) == [("trip", "novel"), ("trip", "novel")]
 
 
 def test_novelty_only_watches_when_told_so(rig_with: RigWith, file_with: FileWith) -> None:

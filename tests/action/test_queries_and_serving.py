@@ -11,10 +11,10 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from nearhand.service.action import queries
 from nearhand.service.action.serving import DEPTH, ROOM, History, Serving
+from nearhand.service.bus import queries
 from nearhand.service.bus.action_messages import ACTION_REQUESTS, Act
-from nearhand.service.bus.codec import decode_map, encode, from_map
+from nearhand.service.bus.codec import decode, decode_map, encode, from_map
 from nearhand.service.errors import WireError
 from nearhand.service.policy.network import Policy
 
@@ -27,7 +27,9 @@ values: st.SearchStrategy[Any] = st.one_of(
 @settings(max_examples=400)
 @given(
     changes=st.dictionaries(
-        st.sampled_from(["v", "kind", "rig", "session", "seq", "sent_ns", "obs", "applied", "x"]), values, max_size=3
+        st.sampled_from(["v", "kind", "rig", "session", "seq", "sent_ns", "obs", "applied", "by_operator", "x"]),
+        values,
+        max_size=3,
     ),
     dropped=st.sets(st.sampled_from(["v", "kind", "rig", "session", "seq", "sent_ns", "obs"]), max_size=1),
 )
@@ -53,9 +55,13 @@ def test_a_hand_checked_query_is_what_the_model_reads(changes: dict[str, Any], d
 
 
 @pytest.mark.parametrize("applied", [None, b"\0" * 8])
-def test_the_usual_query_takes_the_quick_way(applied: bytes | None) -> None:
-    message = Act(rig="rig", session="s", seq=5, sent_ns=9, obs=b"\0" * 12, applied=applied)
+@pytest.mark.parametrize("by_operator", [False, True])
+def test_the_usual_query_takes_the_quick_way(applied: bytes | None, by_operator: bool) -> None:
+    message = Act(rig="rig", session="s", seq=5, sent_ns=9, obs=b"\0" * 12, applied=applied, by_operator=by_operator)
     assert queries.usual(encode(message)) == queries.of(message)
+    if applied is not None:
+        packed = queries.pack_query("rig", "s", 5, 9, b"\0" * 12, applied, by_operator=by_operator)
+        assert decode(packed, ACTION_REQUESTS) == message
 
 
 def test_a_key_that_appears_twice_does_not_take_the_quick_way() -> None:

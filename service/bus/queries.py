@@ -1,4 +1,4 @@
-"""The queries of the action lane, checked by hand where they are as usual; anything else goes to the message models."""
+"""The queries of the action lane, written and read by hand where they are as usual; the models have the rest."""
 
 from __future__ import annotations
 
@@ -9,7 +9,7 @@ import msgpack
 from nearhand.service.bus.action_messages import Act
 from nearhand.service.bus.message import PROTOCOL_VERSION
 
-#: How many fields an ``act`` has besides ``applied``.
+#: How many fields an ``act`` has at least; ``applied`` and ``by_operator`` may be left out.
 FIELDS = 7
 #: First byte of a map of at most fifteen entries, but for the count (MessagePack specification, "map format family").
 FIXMAP = 0x80
@@ -26,11 +26,28 @@ class Query(NamedTuple):
     sent_ns: int
     obs: bytes | tuple[float, ...]
     applied: bytes | tuple[float, ...] | None
+    by_operator: bool = False
+
+
+def pack_query(
+    rig: str, session: str, seq: int, sent_ns: int, obs: bytes, applied: bytes, *, by_operator: bool = False
+) -> bytes:
+    """Return the frame of a usual query."""
+    return bytes(
+        msgpack.packb(
+            {
+                "v": PROTOCOL_VERSION, "kind": "act", "rig": rig, "session": session, "seq": seq, "sent_ns": sent_ns,
+                "obs": obs, "applied": applied, "by_operator": by_operator,
+            }
+        )
+    )  # fmt: skip
 
 
 def of(message: Act) -> Query:
     """Return the query of a message."""
-    return Query(message.rig, message.session, message.seq, message.sent_ns, message.obs, message.applied)
+    return Query(
+        message.rig, message.session, message.seq, message.sent_ns, message.obs, message.applied, message.by_operator
+    )
 
 
 def usual(frame: bytes) -> Query | None:
@@ -40,17 +57,18 @@ def usual(frame: bytes) -> Query | None:
     frame's start. The names' form is not looked at: a name that is no rig's and no session's is refused later.
     """
     count = frame[0] - FIXMAP if frame else 0
-    if not FIELDS <= count <= FIELDS + 1 or len(frame) > SHORT_FRAME_BYTES:
+    if not FIELDS <= count <= FIELDS + 2 or len(frame) > SHORT_FRAME_BYTES:
         return None
     try:
-        table = msgpack.unpackb(frame, use_list=False, max_map_len=FIELDS + 1, max_ext_len=0)
+        table = msgpack.unpackb(frame, use_list=False, max_map_len=FIELDS + 2, max_ext_len=0)
         version, seq, sent_ns = table["v"], table["seq"], table["sent_ns"]
         rig, session, obs, kind = table["rig"], table["session"], table["obs"], table["kind"]
-        applied = table["applied"] if count > FIELDS else None
+        applied, by_operator = table.get("applied"), table.get("by_operator", False)
+        known = FIELDS + ("applied" in table) + ("by_operator" in table)
     except Exception:  # whatever it is, the codec finds words for it
         return None
     if (
-        len(table) == count
+        len(table) == count == known
         and kind == "act"
         and type(version) is int
         and version == PROTOCOL_VERSION
@@ -62,6 +80,7 @@ def usual(frame: bytes) -> Query | None:
         and 0 <= sent_ns < LIMIT
         and type(obs) is bytes
         and (applied is None or type(applied) is bytes)
+        and type(by_operator) is bool
     ):
-        return Query(rig, session, seq, sent_ns, obs, applied)
+        return Query(rig, session, seq, sent_ns, obs, applied, by_operator)
     return None
