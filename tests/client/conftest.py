@@ -14,9 +14,11 @@ from pathlib import Path
 import pytest
 
 from nearhand.client.desk import Desk
+from nearhand.client.link import RigLink
 from nearhand.service.bus.desk_messages import PutRig, RigReply
 from nearhand.service.config import ServiceSettings
 from nearhand.service.rigs import Rig, rig_from_toml
+from tests.client.pretenders import Context, Pace, Pretender, Rigged, Server, crane, policy_bytes
 
 RIG_TOML = """
 name = "cart"
@@ -106,3 +108,40 @@ def keeper(tmp_path: Path) -> Iterator[KeeperProcess]:
         desk.ask(PutRig, RigReply, toml=RIG_TOML, who="test")
     yield process
     process.stop()
+
+
+@pytest.fixture
+def pretender(context: Context) -> Iterator[Pretender]:
+    """A service that can be told what to answer."""
+    made = Pretender(context)
+    yield made
+    made.close()
+
+
+@pytest.fixture
+def rigged(pretender: Pretender) -> Iterator[Rigged]:
+    """A link to the pretender."""
+    made = Rigged(crane(), pretender.address)
+    yield made
+    made.link.close()
+
+
+@pytest.fixture
+def server(context: Context, tmp_path: Path) -> Iterator[Server]:
+    """A running action server process."""
+    made = Server(context, tmp_path)
+    yield made
+    made.close()
+
+
+@pytest.fixture
+def pace(server: Server) -> Iterator[Pace]:
+    """A link to an armed server, armed as well."""
+    server.load(policy_bytes())
+    with RigLink(crane(), server.settings.action) as link:
+        paced = Pace(link)
+        # A busy machine may already have tripped the deadline while starting.
+        while not (paced.drives and paced.drives[-1].mode == "armed" and paced.drives[-1].fresh):
+            server.arm()
+            paced.until(lambda drive: drive.fresh)
+        yield paced
