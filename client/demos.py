@@ -23,6 +23,7 @@ from nearhand.client.spool import SUFFIX, SpoolFile
 from nearhand.client.upload import Upload
 from nearhand.service.bus.codec import decode, encode
 from nearhand.service.bus.intake_messages import INTAKE_REPLIES, Ack, OpenEpisode
+from nearhand.service.bus.keys import ClientKey, key_from_environment
 from nearhand.service.bus.message import ErrorReply
 from nearhand.service.bus.sockets import BULK_QUEUE, connect, make_socket
 from nearhand.service.clock import utc_now
@@ -95,13 +96,16 @@ class DemonstrationStream:
         rig: whose channels are recorded.
         address: the intake lane.
         spool: folder for what is not acknowledged yet.
+        key: a key that may teach, where the service has keys; by default the one that ``NEARHAND_KEY`` names.
 
     Raises:
+        ConfigError: the key cannot be used.
         LinkError: the address is malformed.
         StoreError: the folder cannot be used.
     """
 
-    def __init__(self, rig: Rig, address: str, spool: Path) -> None:
+    def __init__(self, rig: Rig, address: str, spool: Path, *, key: ClientKey | None = None) -> None:
+        self._key = key or key_from_environment()
         self._rig = rig
         self._address = address
         self._folder = spool
@@ -215,7 +219,7 @@ class DemonstrationStream:
         active = dict(self._under_way)
         try:
             try:
-                connect(socket, self._address)
+                connect(socket, self._address, self._key)
             except LinkError as error:
                 ready.put(error)
                 return

@@ -10,21 +10,27 @@ import secrets
 import time
 from collections.abc import Iterator
 from typing import Any, Self, TypeVar
+from urllib.parse import urlsplit
 
 import zmq
 from pydantic import ValidationError
+from zmq.utils.monitor import recv_monitor_message
 
 from nearhand.service.bus.codec import decode, encode
-from nearhand.service.bus.desk_messages import DESK_REPLIES, Deed, DeskReply, DeskRequest
+from nearhand.service.bus.desk_messages import DESK_REPLIES, Deed, DeskReply, DeskRequest, Where, WhereReply
 from nearhand.service.bus.feed_messages import FEED_MESSAGES
+from nearhand.service.bus.keys import KEY_VARIABLE, ClientKey, key_from_environment
 from nearhand.service.bus.message import ErrorReply, Message
 from nearhand.service.bus.sockets import BULK_QUEUE, connect, make_socket
 from nearhand.service.config import DEFAULT_HOST, DEFAULT_PORTS
-from nearhand.service.errors import ConfigError, LinkError, WireError, error_from_code
+from nearhand.service.errors import ConfigError, LinkError, RefusedError, WireError, error_from_code
 from nearhand.service.rigs import sentence
 
 DESK_ADDRESS = f"tcp://{DEFAULT_HOST}:{DEFAULT_PORTS['desk']}"
 FEED_ADDRESS = f"tcp://{DEFAULT_HOST}:{DEFAULT_PORTS['feed']}"
+
+#: What the library tells of a connection that is gone or never came about.
+LOST = zmq.EVENT_DISCONNECTED | zmq.EVENT_HANDSHAKE_FAILED_AUTH | zmq.EVENT_HANDSHAKE_FAILED_PROTOCOL
 
 Reply = TypeVar("Reply", bound=DeskReply)
 
@@ -38,10 +44,16 @@ class Desk:
     Args:
         address: the desk lane.
         timeout_s: how long to wait for an answer; may be changed between questions.
+        key: where the service has keys; by default the one that ``NEARHAND_KEY`` names.
+
+    Raises:
+        ConfigError: the key cannot be used.
+        LinkError: the address is malformed.
     """
 
-    def __init__(self, address: str = DESK_ADDRESS, timeout_s: float = 10.0) -> None:
+    def __init__(self, address: str = DESK_ADDRESS, timeout_s: float = 10.0, *, key: ClientKey | None = None) -> None:
         self._address = address
+        self._key = key or key_from_environment()
         self.timeout_s = timeout_s
         self._prefix = secrets.token_hex(6)
         self._asked = 0
@@ -49,9 +61,10 @@ class Desk:
 
     def _open(self) -> None:
         self._socket = make_socket(zmq.Context.instance(), zmq.DEALER, queue=BULK_QUEUE, role="connect")
-        self._monitor = self._socket.get_monitor_socket(zmq.EVENT_DISCONNECTED, f"inproc://{secrets.token_hex(8)}")
+        self._monitor = self._socket.get_monitor_socket(LOST, f"inproc://{secrets.token_hex(8)}")
+        self._turned_away = ""
         try:
-            connect(self._socket, self._address)
+            connect(self._socket, self._address, self._key)
         except LinkError:
             self.close()
             raise
@@ -95,9 +108,20 @@ class Desk:
             )
         return answer
 
+    def lanes(self) -> WhereReply:
+        """Ask where the lanes are; a service that listens everywhere is reached where its desk is.
+
+        Raises:
+            NearhandError: as :meth:`ask`.
+        """
+        reply = self.ask(Where, WhereReply)
+        here = urlsplit(self._address).hostname or DEFAULT_HOST
+        told = {lane: getattr(reply, lane).replace("//0.0.0.0:", f"//{here}:") for lane in DEFAULT_PORTS}
+        return reply.model_copy(update=told)
+
     def _exchange(self, frame: bytes, identifier: str, *, kind: str, request: type[DeskRequest]) -> Message:
         end_s = time.monotonic() + self.timeout_s
-        self._forget_old_breaks()
+        self._notice_breaks()
         self._socket.send(frame)
         poller = zmq.Poller()
         poller.register(self._socket, zmq.POLLIN)
@@ -109,7 +133,8 @@ class Desk:
                 if answer is not None:
                     return answer
             elif self._monitor in ready:
-                self._forget_old_breaks()
+                if not self._notice_breaks():
+                    continue
                 if issubclass(request, Deed):
                     self._reopen()
                     raise LinkError(
@@ -121,7 +146,7 @@ class Desk:
         self._reopen()
         raise LinkError(
             f"no answer from {self._address} to {kind!r} within {self.timeout_s:g} s; is `nearhand serve` running "
-            "there?",
+            "there" + ("?" if self._key is None else ", and is the key one of that service's?"),
             code="link.silent",
         )
 
@@ -136,9 +161,29 @@ class Desk:
         unreadable = isinstance(message, ErrorReply) and echoed is None
         return message if echoed == identifier or unreadable else None
 
-    def _forget_old_breaks(self) -> None:
+    def _notice_breaks(self) -> bool:
+        """Return whether the connection has broken since the last time.
+
+        Raises:
+            RefusedError: it never came about, because of the key.
+        """
+        lost = False
         while self._monitor.poll(0):
-            self._monitor.recv_multipart()
+            event = recv_monitor_message(self._monitor)["event"]
+            lost |= event == zmq.EVENT_DISCONNECTED
+            if event == zmq.EVENT_HANDSHAKE_FAILED_AUTH:
+                name = "" if self._key is None else self._key.name
+                self._turned_away = f"does not let in the key {name!r}; it was revoked, or is another service's"
+            elif event == zmq.EVENT_HANDSHAKE_FAILED_PROTOCOL:
+                self._turned_away = (
+                    f"asks for a key: give --key FILE or set {KEY_VARIABLE}" if self._key is None
+                    else f"has no keys, or this is no Nearhand service: leave out --key and {KEY_VARIABLE}"
+                )  # fmt: skip
+        if self._turned_away:
+            told = self._turned_away
+            self._reopen()
+            raise RefusedError(f"{self._address} {told}", code="refused.key")
+        return lost
 
     def _reopen(self) -> None:
         """Start with a fresh socket, so that a question given up is never delivered late."""
@@ -165,19 +210,28 @@ class Feed:
         address: the feed lane.
         timeout_s: how long iterating waits for the next message.
         topics: kinds to subscribe to; all when empty.
+        key: a key that may view, where the service has keys; by default the one that ``NEARHAND_KEY`` names.
 
     Attributes:
         unreadable: how many frames could not be read and were passed over.
     """
 
-    def __init__(self, address: str = FEED_ADDRESS, timeout_s: float = 10.0, *, topics: tuple[str, ...] = ()) -> None:
+    def __init__(
+        self,
+        address: str = FEED_ADDRESS,
+        timeout_s: float = 10.0,
+        *,
+        topics: tuple[str, ...] = (),
+        key: ClientKey | None = None,
+    ) -> None:
+        key = key or key_from_environment()
         self._timeout_s = timeout_s
         self.unreadable = 0
         self._socket = make_socket(zmq.Context.instance(), zmq.SUB, queue=BULK_QUEUE, role="connect")
         for topic in topics or ("",):
             self._socket.setsockopt(zmq.SUBSCRIBE, topic.encode())
         try:
-            connect(self._socket, address)
+            connect(self._socket, address, key)
         except LinkError:
             self.close()
             raise

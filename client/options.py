@@ -5,6 +5,7 @@ from __future__ import annotations
 import argparse
 import getpass
 import json
+import os
 from pathlib import Path
 from typing import Any
 
@@ -13,6 +14,7 @@ from pydantic import ValidationError
 from nearhand.client.desk import Desk
 from nearhand.configs import builtin_names, builtin_text
 from nearhand.service.bus.desk_messages import ListRigs, RigsReply
+from nearhand.service.bus.keys import KEY_VARIABLE
 from nearhand.service.config import DEFAULT_HOST, DEFAULT_PORTS
 from nearhand.service.errors import ConfigError, UnknownNameError
 from nearhand.service.rigs import Rig, rig_from_toml, sentence
@@ -22,6 +24,9 @@ def add_desk_options(parser: argparse.ArgumentParser) -> None:
     """Declare where the service is and how to print."""
     default = f"tcp://{DEFAULT_HOST}:{DEFAULT_PORTS['desk']}"
     parser.add_argument("--service", default=default, metavar="ADDRESS", help="the desk lane (default: %(default)s)")
+    parser.add_argument(
+        "--key", metavar="FILE", help=f"a key, where the service has keys (default: the file that {KEY_VARIABLE} names)"
+    )
     parser.add_argument("--json", action="store_true", help="print one JSON object and nothing else")
 
 
@@ -44,7 +49,12 @@ def _login() -> str:
 
 
 def open_desk(options: argparse.Namespace) -> Desk:
-    """Return a connection to the service that the options name; the caller closes it."""
+    """Return a connection to the service that the options name; the caller closes it.
+
+    What ``--key`` names holds for the whole command: for its other connections and for the rig processes it starts.
+    """
+    if options.key is not None:
+        os.environ[KEY_VARIABLE] = options.key
     return Desk(options.service)
 
 

@@ -16,7 +16,7 @@ from nearhand.client.demos import Delivery, DemonstrationStream
 from nearhand.client.desk import Desk
 from nearhand.client.options import add_deed_options, add_desk_options, open_desk, print_json, rig_text
 from nearhand.client.tryout.rig_process import RigProcess
-from nearhand.service.bus.desk_messages import GetRig, PutRig, RigReply, Where, WhereReply
+from nearhand.service.bus.desk_messages import GetRig, PutRig, RigReply
 from nearhand.service.bus.intake_messages import Outcome
 from nearhand.service.errors import ConfigError, UnknownNameError
 from nearhand.service.rigs import Rig
@@ -45,7 +45,7 @@ def run(options: argparse.Namespace) -> int:
         raise ConfigError(f"--episodes = {options.episodes}; expected at least 1")
     with open_desk(options) as desk, tempfile.TemporaryDirectory(prefix="nearhand-") as folder:
         rig, source = _settle_rig(desk, options, Path(folder))
-        intake = desk.ask(Where, WhereReply).intake
+        intake = desk.lanes().intake
         spool = options.spool or Path(folder) / "spool"
         rows = (
             _imported(rig, options, intake, spool) if options.source else _driven(rig, source, options, intake, spool)

@@ -12,7 +12,9 @@ from nearhand.service.config import DEFAULT_HOST, DEFAULT_PORTS, ServiceSettings
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the options of ``serve``."""
     parser.add_argument("--data", type=Path, default=Path("nearhand-data"), help="data folder (default: %(default)s)")
-    parser.add_argument("--host", default=DEFAULT_HOST, help="loopback host to listen on (default: %(default)s)")
+    parser.add_argument(
+        "--host", default=DEFAULT_HOST, help="where to listen; without keys a loopback host only (default: %(default)s)"
+    )
     for lane, port in DEFAULT_PORTS.items():
         parser.add_argument(f"--{lane}-port", type=int, default=port, help=f"{lane} lane (default: %(default)s)")
     parser.add_argument("--pick-ports", action="store_true", help="listen on any free ports and say which")

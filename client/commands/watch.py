@@ -5,7 +5,7 @@ from __future__ import annotations
 import argparse
 
 from nearhand.client.options import add_desk_options, open_desk, print_json
-from nearhand.service.bus.desk_messages import GetHealth, HealthReply, Where, WhereReply
+from nearhand.service.bus.desk_messages import GetHealth, HealthReply
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
@@ -23,6 +23,6 @@ def run(options: argparse.Namespace) -> int:
         from nearhand.client.desk import Feed
         from nearhand.client.watch import watch
 
-        with Feed(desk.ask(Where, WhereReply).feed) as feed:
+        with Feed(desk.lanes().feed) as feed:
             watch(desk, feed, once=options.once)
     return 0

@@ -20,17 +20,31 @@ STOP_TIMEOUT_S = 15.0
 class ServiceProcess:
     """``nearhand serve`` on ports picked at run time, its log in the data folder; a context manager.
 
+    Args:
+        data: the data folder.
+        options: further options of ``nearhand serve``.
+
     Attributes:
         lanes: address by lane.
         log: file with the service's log lines.
     """
 
-    def __init__(self, data: Path) -> None:
+    def __init__(self, data: Path, *options: str) -> None:
         data.mkdir(parents=True, exist_ok=True)
         self.log = data / "service.log"
         self._stream = self.log.open("ab")
         self._process = subprocess.Popen(
-            [sys.executable, "-m", "nearhand.client.command", "serve", "--data", str(data), "--pick-ports", "--json"],
+            [
+                sys.executable,
+                "-m",
+                "nearhand.client.command",
+                "serve",
+                "--data",
+                str(data),
+                "--pick-ports",
+                "--json",
+                *options,
+            ],
             stdin=subprocess.DEVNULL,
             stdout=subprocess.PIPE,
             stderr=self._stream,

@@ -130,6 +130,8 @@ class KeyFolder:
                 f"roles {', '.join(sorted(roles)) or '(none)'}; expected some of: {', '.join(ROLES)}",
                 code="config.roles",
             )
+        if os.path.lexists(file):
+            raise ConfigError(f"{file} exists; name another file, nothing was changed", code="config.key_file")
         with self._locked():
             if not self.is_there:
                 pair = _fresh_pair()

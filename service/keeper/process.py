@@ -50,9 +50,7 @@ class Keeper:
         feed = self._feed = Feed(self._context, settings.feed, door)
         ledger = Ledger(self.store, feed)
         self._access = Access(door, ledger)
-        self._intake_lane = Lane(
-            self._context, settings.intake, queue=INTAKE_QUEUE, admission=door, name="intake"
-        )
+        self._intake_lane = Lane(self._context, settings.intake, queue=INTAKE_QUEUE, admission=door, name="intake")
         self._desk_lane = Lane(self._context, settings.desk, queue=DESK_QUEUE, admission=door, name="desk")
         self._server = ActionServer(ledger, self._context, settings.control)
         self._queue = JobQueue(ledger, settings, self._context, self._poller)
