@@ -28,6 +28,7 @@ from nearhand.service.bus.action_messages import ACTION_REPLIES, Act, Action, He
 from nearhand.service.bus.arrays import pack
 from nearhand.service.bus.codec import decode, encode
 from nearhand.service.bus.control_messages import CONTROL_REPLIES, Arm, ControlReply, Load
+from nearhand.service.bus.keys import ClientKey
 from nearhand.service.bus.message import Message
 from nearhand.service.bus.sockets import ACTION_QUEUE, BULK_QUEUE, connect, make_socket
 from nearhand.service.config import ServiceSettings
@@ -138,8 +139,12 @@ def _echo() -> Iterator[str]:
 
 
 @contextmanager
-def _action_server(context: zmq.Context[Socket], folder: Path, rig: Rig) -> Iterator[str]:
-    """Run an action server with the rig's policy loaded and armed; yield its address."""
+def action_server(context: zmq.Context[Socket], folder: Path, rig: Rig, *, keys: Path | None = None) -> Iterator[str]:
+    """Run an action server with the rig's policy loaded and armed; yield its address.
+
+    Args:
+        keys: folder of the service's keys, where it shall have some.
+    """
     probe = context.socket(zmq.ROUTER)
     probe.bind("tcp://127.0.0.1:*")
     address = probe.getsockopt_string(zmq.LAST_ENDPOINT).rstrip("\x00")
@@ -147,7 +152,7 @@ def _action_server(context: zmq.Context[Socket], folder: Path, rig: Rig) -> Iter
     unused = f"ipc://{folder / 'unused.ipc'}"
     settings = ServiceSettings(
         data=folder, action=address, intake=unused, desk=unused, feed=unused,
-        control=f"ipc://{folder / 'control.ipc'}", progress=unused,
+        control=f"ipc://{folder / 'control.ipc'}", progress=unused, keys=keys,
     )  # fmt: skip
     path = folder / "settings.json"
     path.write_text(settings.model_dump_json(), encoding="utf-8")
@@ -180,7 +185,7 @@ def _action_server(context: zmq.Context[Socket], folder: Path, rig: Rig) -> Iter
         yield address
 
 
-def _queries(rig: Rig, count: int) -> Iterator[bytes]:
+def make_queries(rig: Rig, count: int) -> Iterator[bytes]:
     """Yield queries, stamped as they are taken: observations that move as a machine's do, within their ranges."""
     generator = np.random.default_rng(1)
     phases, rates = generator.uniform(0, 2 * np.pi, (2, OBSERVATIONS))
@@ -190,7 +195,7 @@ def _queries(rig: Rig, count: int) -> Iterator[bytes]:
         yield encode(Act(rig=rig.name, session="bench", seq=seq, sent_ns=time.monotonic_ns(), obs=pack(row)))
 
 
-def _ask(socket: Socket, frame: bytes) -> tuple[bytes, int]:
+def ask(socket: Socket, frame: bytes) -> tuple[bytes, int]:
     """Return the reply and how long it took, ns."""
     begin_ns = time.perf_counter_ns()
     socket.send(frame)
@@ -198,10 +203,11 @@ def _ask(socket: Socket, frame: bytes) -> tuple[bytes, int]:
     return reply, time.perf_counter_ns() - begin_ns
 
 
-def _client(context: zmq.Context[Socket], address: str) -> Socket:
+def make_client(context: zmq.Context[Socket], address: str, key: ClientKey | None = None) -> Socket:
+    """Return a socket that asks and waits."""
     socket = make_socket(context, zmq.REQ, queue=ACTION_QUEUE, role="connect")
     socket.setsockopt(zmq.RCVTIMEO, REPLY_TIMEOUT_MS)
-    connect(socket, address)
+    connect(socket, address, key)
     return socket
 
 
@@ -216,7 +222,7 @@ def run(seconds: float = 60.0) -> dict[str, Any]:
     """
     rig = bench_rig()
     paced = round(seconds * RATE_HZ)
-    queries = _queries(rig, WARM_UP + QUERIES + paced)
+    queries = make_queries(rig, WARM_UP + QUERIES + paced)
     context: zmq.Context[Socket] = zmq.Context()
     idle: Times = {"action": [], "echo": []}
     loaded: Times = {"action": [], "echo": []}
@@ -224,10 +230,10 @@ def run(seconds: float = 60.0) -> dict[str, Any]:
         with (
             tempfile.TemporaryDirectory(prefix="nearhand-") as folder,
             _echo() as echo_address,
-            _action_server(context, Path(folder), rig) as action_address,
+            action_server(context, Path(folder), rig) as action_address,
         ):
-            sockets = {"action": _client(context, action_address), "echo": _client(context, echo_address)}
-            _welcome(rig, sockets["action"])
+            sockets = {"action": make_client(context, action_address), "echo": make_client(context, echo_address)}
+            welcome_session(rig, sockets["action"])
             replies = _measure(sockets, islice(queries, WARM_UP + QUERIES), idle, TURN, 0.0)
             if paced:
                 with MachineLoad(Path(folder) / "load") as load:
@@ -238,7 +244,7 @@ def run(seconds: float = 60.0) -> dict[str, Any]:
         raise LinkError(f"no reply within {REPLY_TIMEOUT_MS} ms") from error
     finally:
         context.destroy(linger=0)
-    _check(replies)
+    check_replies(replies)
     idle = {name: values[WARM_UP:] for name, values in idle.items()}
     figures, ratios = _compared("", idle)
     goals: dict[str, tuple[float, float]] = {name: (ratios[name], 1.5) for name in ("p50 ratio", "p99 ratio")}
@@ -273,12 +279,17 @@ def _compared(prefix: str, times: Times) -> tuple[dict[str, float], dict[str, fl
     return figures, ratios
 
 
-def _welcome(rig: Rig, socket: Socket) -> None:
+def welcome_session(rig: Rig, socket: Socket) -> None:
+    """Begin the session that the queries belong to.
+
+    Raises:
+        LinkError: the action server does not take it.
+    """
     hello = Hello(
         rig=rig.name, session="bench", observations=tuple(c.name for c in rig.observations),
         actions=tuple(c.name for c in rig.actions), period_s=rig.timing.period_s,
     )  # fmt: skip
-    welcome, _ = _ask(socket, encode(hello))
+    welcome, _ = ask(socket, encode(hello))
     if not isinstance(decode(welcome, ACTION_REPLIES), Welcome):
         raise LinkError(f"the action server did not welcome the session: {decode(welcome, ACTION_REPLIES)!r}")
 
@@ -292,7 +303,7 @@ def _measure(
         turn: how many queries before the other has its turn.
         every_s: least time between two queries; 0 for as soon as the last is answered.
     """
-    replies = []
+    replies: list[bytes] = []
     asked: list[bytes] = []
     while len(asked) == turn or not replies:
         asked = []
@@ -300,13 +311,13 @@ def _measure(
         for frame in islice(queries, turn):
             asked.append(frame)
             due_s = _wait_until(due_s) + every_s
-            reply, taken_ns = _ask(sockets["action"], frame)
+            reply, taken_ns = ask(sockets["action"], frame)
             replies.append(reply)
             times["action"].append(taken_ns)
         due_s = time.monotonic()
         for frame in asked:
             due_s = _wait_until(due_s) + every_s
-            times["echo"].append(_ask(sockets["echo"], frame)[1])
+            times["echo"].append(ask(sockets["echo"], frame)[1])
     return replies
 
 
@@ -317,7 +328,7 @@ def _wait_until(due_s: float) -> float:
     return due_s
 
 
-def _check(replies: list[bytes]) -> None:
+def check_replies(replies: list[bytes]) -> None:
     """Make sure that what was measured is the policy at work."""
     for frame in replies:
         reply = decode(frame, ACTION_REPLIES)

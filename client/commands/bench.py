@@ -10,7 +10,10 @@ from nearhand.client.options import print_json
 from nearhand.service.errors import ConfigError
 
 #: Benchmark → module with ``run(**options) -> dict`` (bench, figures, ratios, targets).
-BENCHES = {"action-latency": "nearhand.client.bench_action"}
+BENCHES = {
+    "action-latency": "nearhand.client.bench_action",
+    "curve-cost": "nearhand.client.bench_curve",
+}
 #: What may be told to a benchmark that takes it.
 OPTIONS = ("seconds", "count", "seeds")
 
