@@ -24,6 +24,7 @@ VERBS: dict[str, str] = {
     "distil": "train a policy from the demonstrations",
     "measure": "measure a version's distance to the expert",
     "release": "put a measured version in service, through the gate",
+    "shadow": "have a version look on without acting, and see how far it is from what is done",
     "rollback": "put an earlier version back in service",
     "rearm": "clear a latched trip, or latch a rig",
     "watch": "see the rigs live",

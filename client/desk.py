@@ -17,7 +17,8 @@ from pydantic import ValidationError
 from zmq.utils.monitor import recv_monitor_message
 
 from nearhand.service.bus.codec import decode, encode
-from nearhand.service.bus.desk_messages import DESK_REPLIES, Deed, DeskReply, DeskRequest, Where, WhereReply
+from nearhand.service.bus.desk_messages import DESK_REPLIES, Where, WhereReply
+from nearhand.service.bus.desk_request import Deed, DeskReply, DeskRequest
 from nearhand.service.bus.feed_messages import FEED_MESSAGES
 from nearhand.service.bus.keys import KEY_VARIABLE, ClientKey, key_from_environment
 from nearhand.service.bus.message import ErrorReply, Message

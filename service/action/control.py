@@ -10,7 +10,7 @@ from pydantic import ValidationError
 from nearhand.service.action.driven_rig import DrivenRig
 from nearhand.service.action.records import Occurrences
 from nearhand.service.bus.action_messages import Reason
-from nearhand.service.bus.control_messages import Arm, ControlReply, Drain, DrainReply, Latch, Load
+from nearhand.service.bus.control_messages import Accompany, Arm, ControlReply, Drain, DrainReply, Latch, Load
 from nearhand.service.bus.message import Message
 from nearhand.service.clock import Clock
 from nearhand.service.errors import ConfigError, UnknownNameError, WireError
@@ -18,6 +18,8 @@ from nearhand.service.policy.format import PolicyFile, read_policy
 from nearhand.service.rigs import Rig, sentence
 
 MOST_PER_DRAIN = 500
+#: Rows of a shadow per drain: ten drains a second keep up with a rig of many kilohertz.
+MOST_ROWS_PER_DRAIN = 2_000
 
 
 class Control:
@@ -48,6 +50,8 @@ class Control:
             return self._drain(message)
         if isinstance(message, Load):
             return self._load(message)
+        if isinstance(message, Accompany):
+            return self._accompany(message)
         if isinstance(message, Arm):
             driven = self._known(message.rig)
             driven.governor.arm()
@@ -84,6 +88,12 @@ class Control:
         self._occurrences.note(message.rig, "loaded", {"version": message.version})
         return self._state(driven, message.request)
 
+    def _accompany(self, message: Accompany) -> ControlReply:
+        driven = self._known(message.rig)
+        file = read_policy(message.policy, expected_sha256=message.sha256) if message.version else None
+        driven.accompany(message.version, file)
+        return self._state(driven, message.request)
+
     @staticmethod
     def _state(driven: DrivenRig, request: str) -> ControlReply:
         governor = driven.governor
@@ -101,6 +111,11 @@ class Control:
             occurrences=self._occurrences.after(message.after, MOST_PER_DRAIN),
             rigs={name: driven.state() for name, driven in self._rigs.items()},
             counters=dict(counters),
+            shadows={
+                name: driven.shadow.after(message.shadows.get(name, 0), MOST_ROWS_PER_DRAIN)
+                for name, driven in self._rigs.items()
+                if driven.shadow is not None
+            },
         )
 
     def collect(self) -> None:

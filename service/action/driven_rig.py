@@ -6,15 +6,20 @@ from typing import Any
 
 import numpy as np
 
-from nearhand.service.action.governor import Decision, Governor
-from nearhand.service.bus.action_messages import Hello, Welcome
+from nearhand.service.action.governor import Decision, Governor, check_rig
+from nearhand.service.action.shadow import BY_FALLBACK, BY_OPERATOR, BY_POLICY, Shadow
+from nearhand.service.bus.action_messages import Hello, Reason, Welcome
 from nearhand.service.bus.arrays import unpack
 from nearhand.service.bus.queries import Query
 from nearhand.service.clock import Clock
 from nearhand.service.errors import ConflictError, UnknownNameError, WireError
+from nearhand.service.policy.format import PolicyFile
 from nearhand.service.rigs import Rig
 
 PERIOD_TOLERANCE = 1e-6
+#: Reasons of an observation that was not taken in.
+UNSEEN = int(Reason.FORM | Reason.OLD)
+TAKEN = int(Reason.TAKEN)
 
 
 class DrivenRig:
@@ -30,6 +35,8 @@ class DrivenRig:
         self.governor = Governor(rig)
         self._n, self._m = len(rig.observations), len(rig.actions)
         self._clock = clock
+        self.shadow: Shadow | None = None
+        self._rows = 0
         self._session = ""
         self._last_ns: int | None = None
         self._counted_ns = clock.now_ns()
@@ -60,6 +67,8 @@ class DrivenRig:
             )
         self._session = message.session
         self.governor.begin_session(message.session, self._clock.now_ns())
+        if self.shadow is not None:
+            self.shadow.restart()
         return Welcome(
             rig=self.rig.name, session=message.session, mode=self.governor.mode, version=self.governor.version,
             deadline_s=self.rig.timing.deadline_s, lease_s=self.rig.timing.lease_s,
@@ -89,6 +98,30 @@ class DrivenRig:
             raise
         return self.governor.act(observation, query.seq, query.sent_ns, now_ns, applied, by_operator=query.by_operator)
 
+    def accompany(self, version: int, file: PolicyFile | None) -> None:
+        """Begin a shadow with a version's file, or end it (0, None).
+
+        Raises:
+            PolicyFormatError: the file is for another rig or other channels; nothing changes.
+        """
+        if self.shadow is not None:
+            self._rows = self.shadow.number
+        if file is None:
+            self.shadow = None
+            return
+        check_rig(self.rig, version, file)
+        self.shadow = Shadow(version, file.policy, self._rows)
+
+    def look_on(self, decision: Decision) -> None:
+        """Let the shadow look at what has just been answered."""
+        if self.shadow is None:
+            return
+        if decision.reasons & UNSEEN:
+            self.shadow.restart()
+            return
+        driver = BY_OPERATOR if decision.reasons & TAKEN else BY_POLICY if decision.mode == "armed" else BY_FALLBACK
+        self.shadow.look(self.governor.observed, self.governor.acted, driver)
+
     def state(self) -> dict[str, Any]:
         """Return what the keeper shows of the rig."""
         now_ns = self._clock.now_ns()
@@ -109,4 +142,5 @@ class DrivenRig:
             "trips": self.governor.counts["trips"],
             "age_s": -1.0 if self._last_ns is None else (now_ns - self._last_ns) * 1e-9,
             "rate_hz": self._rate_hz,
+            "shadow": 0 if self.shadow is None else self.shadow.version,
         }

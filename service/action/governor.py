@@ -40,6 +40,21 @@ class Decision(NamedTuple):
     novelty: float
 
 
+def check_rig(rig: Rig, version: int, file: PolicyFile) -> None:
+    """Make sure that a version's file is for this rig and its channels.
+
+    Raises:
+        PolicyFormatError: it is not.
+    """
+    names = tuple(c.name for c in rig.observations), tuple(c.name for c in rig.actions)
+    if file.rig != rig.name or (file.observations, file.actions) != names:
+        raise PolicyFormatError(
+            f"version {version} is for rig {file.rig} with channels {file.observations} → {file.actions}; "
+            f"rig {rig.name} has {names[0]} → {names[1]}",
+            code="policy.rig",
+        )
+
+
 class Governor:
     """Decides one rig's actions.
 
@@ -50,6 +65,7 @@ class Governor:
     Attributes:
         mode: ``empty``, ``latched`` or ``armed``.
         version: the version in service, 0 for none.
+        observed, acted: the past, as policies see it: finite observations, and the action in force before each.
         reasons: why it is not armed.
         counts: queries, trips and interventions by name.
         happened: what the owner has not collected yet, oldest first: ("trip", reasons), ("taken", …) when the operator
@@ -69,7 +85,7 @@ class Governor:
         self._file: PolicyFile | None = None
         self._novelty: NoveltyScore | None = None
         self._serving: Serving | None = None
-        self._observed, self._acted = History(self._n), History(self._m)
+        self.observed, self.acted = History(self._n), History(self._m)
         self._fresh_history = True
         self._epsilon = 1.0
         self._low_values: deque[bool] = deque(maxlen=rig.novelty.window_n)
@@ -97,7 +113,7 @@ class Governor:
     @property
     def last_observation(self) -> Float32:
         """The last observation that was finite, (n,)."""
-        latest: Float32 = self._observed.newest(1)[0].copy()
+        latest: Float32 = self.observed.newest(1)[0].copy()
         return latest
 
     def due_ns(self) -> int | None:
@@ -114,13 +130,7 @@ class Governor:
             self._file, self._serving, self._novelty, self.version = None, None, None, 0
             self.mode, self.reasons = "empty", Reason.EMPTY
             return
-        names = tuple(c.name for c in self.rig.observations), tuple(c.name for c in self.rig.actions)
-        if file.rig != self.rig.name or (file.observations, file.actions) != names:
-            raise PolicyFormatError(
-                f"version {version} is for rig {file.rig} with channels {file.observations} → {file.actions}; "
-                f"rig {self.rig.name} has {names[0]} → {names[1]}",
-                code="policy.rig",
-            )
+        check_rig(self.rig, version, file)
         novelty = None
         if file.novelty:
             try:
@@ -228,7 +238,7 @@ class Governor:
         proposed = None
         self.novelty = 1.0
         if seen and self._serving is not None:
-            p_value = self._serving.look(self._observed, self._acted)
+            p_value = self._serving.look(self.observed, self.acted)
             proposed = self._serving.propose()
             if self._novelty is not None and self._epsilon < 1.0:
                 self._judge(p_value)
@@ -271,13 +281,13 @@ class Governor:
     def _remember(self, observation: Float32, values: Sequence[float], now_ns: int) -> None:
         """Take in a finite observation, also given as plain numbers, and the action that led to it."""
         if self._fresh_history:
-            self._observed.fill(observation)
-            self._acted.fill(self._previous)
+            self.observed.fill(observation)
+            self.acted.fill(self._previous)
             self._guards.restart(self._previous)
             self._fresh_history = False
         else:
-            self._observed.push(observation)
-            self._acted.push(self._previous)
+            self.observed.push(observation)
+            self.acted.push(self._previous)
         self._fallback.see(values, now_ns)
 
     def _judge(self, p_value: float) -> None:

@@ -18,6 +18,7 @@ from pydantic import ValidationError
 
 from nearhand.service.action.control import Control
 from nearhand.service.action.driven_rig import DrivenRig
+from nearhand.service.action.governor import Decision
 from nearhand.service.action.keyed import KeyedLane
 from nearhand.service.action.records import Occurrences
 from nearhand.service.bus import queries
@@ -40,6 +41,10 @@ SEND_MORE = zmq.NOBLOCK | zmq.SNDMORE
 
 Socket = zmq.Socket[bytes]
 Receive = Callable[[int], list[bytes]]
+
+
+#: A socket, how to receive from it, how to answer, and how many requests in a row.
+Lane = tuple[Socket, Receive, Callable[[bytes], bytes], int]
 
 
 class Stop(Protocol):
@@ -81,6 +86,7 @@ class ActionServer:
         self._clock = clock
         self._rigs: dict[str, DrivenRig] = {}
         self._tick_ns = 0
+        self._answered: list[tuple[DrivenRig, Decision]] = []
         self._occurrences = Occurrences()
         self._packer = msgpack.Packer(use_bin_type=True)
         self.counters: Counter[str] = Counter()
@@ -108,9 +114,14 @@ class ActionServer:
         # a socket is served until it has nothing, or asked again without waiting.
         with select.epoll() as poll, np.errstate(over="ignore", invalid="ignore"):
             poll.register(stop.fileno(), select.EPOLLIN)
-            lanes = {
-                self._action.getsockopt(zmq.FD): (self._action, self._receive, self._reply_to, BURST),
-                self._control.getsockopt(zmq.FD): (self._control, self._control.recv_multipart, self._carry_out, 1),
+            lanes: dict[int, Lane] = {
+                int(self._action.getsockopt(zmq.FD)): (self._action, self._receive, self._reply_to, BURST),
+                int(self._control.getsockopt(zmq.FD)): (
+                    self._control,
+                    self._control.recv_multipart,
+                    self._carry_out,
+                    1,
+                ),
             }
             for descriptor in lanes:
                 poll.register(descriptor, select.EPOLLIN)
@@ -142,8 +153,7 @@ class ActionServer:
         self._control_room.collect()
         gc.collect(1)  # the little that errors leave behind; the process has switched the automatic collection off
 
-    @staticmethod
-    def _serve(socket: Socket, receive: Receive, answer: Callable[[bytes], bytes], most: int) -> bool:
+    def _serve(self, socket: Socket, receive: Receive, answer: Callable[[bytes], bytes], most: int) -> bool:
         """Answer at most so many requests; return whether there are no more."""
         for _ in range(most):
             try:
@@ -157,7 +167,10 @@ class ActionServer:
                     socket.send(part, SEND_MORE)
                 socket.send(reply, zmq.NOBLOCK)
             except zmq.ZMQError:
-                continue  # a peer that does not read its replies must not hold up the others
+                pass  # a peer that does not read its replies must not hold up the others
+            while self._answered:
+                driven, decision = self._answered.pop()
+                driven.look_on(decision)
         return False
 
     def _answer(self, frame: bytes) -> bytes:
@@ -191,6 +204,8 @@ class ActionServer:
         decision = driven.act(query)
         if driven.governor.happened:
             self._control_room.collect()
+        if driven.shadow is not None:
+            self._answered.append((driven, decision))
         reply = {
             "v": PROTOCOL_VERSION, "kind": "action", "seq": query.seq, "sent_ns": query.sent_ns,
             "action": decision.action.astype(WIRE_DTYPE, copy=False).tobytes(), "mode": decision.mode,

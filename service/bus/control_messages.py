@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from typing import ClassVar
 
+from pydantic import Field
+
 from nearhand.service.bus.message import Count, ErrorReply, Identifier, Label, Message, Table, Text, kinds
 
 
@@ -18,6 +20,18 @@ class Load(Message):
     request: Identifier
     rig: Identifier
     description: Table
+    version: Count
+    sha256: Label = ""
+    policy: bytes = b""
+
+
+class Accompany(Message):
+    """Have a version look on beside whoever acts, without acting; ``version`` 0 ends it."""
+
+    lane: ClassVar[str] = "control"
+    kind: str = "accompany"
+    request: Identifier
+    rig: Identifier
     version: Count
     sha256: Label = ""
     policy: bytes = b""
@@ -46,16 +60,20 @@ class Latch(Message):
 
 
 class Drain(Message):
-    """Ask for counters, rig states and the occurrences after number ``after``; earlier ones may be forgotten."""
+    """Ask for counters, rig states and the occurrences after number ``after``; earlier ones may be forgotten.
+
+    ``shadows``: by rig, the number of the last row of its shadow that is stored.
+    """
 
     lane: ClassVar[str] = "control"
     kind: str = "drain"
     request: Identifier
     after: Count
+    shadows: dict[str, Count] = Field(default_factory=dict)
 
 
 class ControlReply(Message):
-    """Reply to ``load``, ``arm`` and ``latch``: the rig's state."""
+    """Reply to ``load``, ``accompany``, ``arm`` and ``latch``: the rig's state."""
 
     lane: ClassVar[str] = "control"
     kind: str = "control-reply"
@@ -70,8 +88,10 @@ class DrainReply(Message):
     """``instance`` changes with every start of the action server.
 
     ``occurrences``: maps {number, utc, rig, what, detail}; ``what`` is ``trip``, ``armed``, ``latched``, ``loaded``,
-    ``session``. ``rigs``: name → {mode, version, reasons, observation, action, novelty, queries, interventions,
-    trips, age_s, rate_hz}.
+    ``session``, ``taken``, ``handed-back``. ``rigs``: name → {mode, version, reasons, observation, action, novelty,
+    queries, interventions, trips, age_s, rate_hz, shadow}. ``shadows``: rig → {version, first, count, would, done,
+    driver}: rows from number ``first`` on, float32 rows and one byte each for who acted (0 fallback, 1 policy,
+    2 operator).
     """
 
     lane: ClassVar[str] = "control"
@@ -81,7 +101,8 @@ class DrainReply(Message):
     occurrences: tuple[Table, ...]
     rigs: dict[str, Table]
     counters: dict[str, int]
+    shadows: dict[str, Table] = Field(default_factory=dict)
 
 
-CONTROL_REQUESTS = kinds(Load, Arm, Latch, Drain)
+CONTROL_REQUESTS = kinds(Load, Accompany, Arm, Latch, Drain)
 CONTROL_REPLIES = kinds(ControlReply, DrainReply, ErrorReply)

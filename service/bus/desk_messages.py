@@ -6,36 +6,12 @@ from typing import ClassVar, Literal
 
 from pydantic import Field, FiniteFloat
 
-from nearhand.service.bus.message import Count, ErrorReply, Identifier, Label, Message, Table, Text, kinds
+from nearhand.service.bus.desk_request import Deed, DeskReply, DeskRequest
+from nearhand.service.bus.message import Count, ErrorReply, Identifier, Label, Table, Text, kinds
+from nearhand.service.bus.shadow_messages import GetShadow, ShadowReply, StartShadow, StopShadow
 
 JobKind = Literal["distil", "measure", "inspect"]
 JobState = Literal["queued", "running", "done", "failed", "cancelled"]
-
-
-class DeskRequest(Message):
-    """Base of desk requests; ``request`` comes back in the reply.
-
-    ``role`` is what a key needs for it, where the service has keys; an empty one means that any key will do.
-    """
-
-    lane: ClassVar[str] = "desk"
-    role: ClassVar[str] = "view"
-    request: Identifier
-
-
-class DeskReply(Message):
-    """Base of desk replies."""
-
-    lane: ClassVar[str] = "desk"
-    request: Identifier
-
-
-class Deed(DeskRequest):
-    """Base of requests that change something: who does it and why go to the event record."""
-
-    role: ClassVar[str] = "release"
-    who: Label = Field(min_length=1)
-    why: Text = ""
 
 
 class Where(DeskRequest):
@@ -323,8 +299,10 @@ class HealthReply(DeskReply):
 DESK_REQUESTS = kinds(
     Where, PutRig, GetRig, ListRigs, ListEpisodes, GetEpisode, StartJob, GetJob, CancelJob, ListJobs, ListVersions,
     GetVersion, Release, Rollback, StandDown, Rearm, Halt, ListEvents, VerifyEvents, GetHealth,
+    StartShadow, StopShadow, GetShadow,
 )  # fmt: skip
 DESK_REPLIES = kinds(
     WhereReply, RigReply, RigsReply, EpisodesReply, EpisodeReply, JobReply, JobsReply, VersionsReply, VersionReply,
-    ReleaseReply, RigStateReply, EventsReply, VerifyReply, HealthReply, ErrorReply,
+    ReleaseReply, RigStateReply, EventsReply, VerifyReply, HealthReply, ShadowReply,
+    ErrorReply,
 )  # fmt: skip

@@ -85,7 +85,8 @@ def covering(points: Float32, most: int) -> Float32:
     The largest distance from any point to the nearest chosen one is at most twice the least possible.
     Source: Gonzalez 1985, Theoretical Computer Science 38 (from memory).
     """
-    farthest, chosen = 0, []
+    farthest = 0
+    chosen: list[int] = []
     gaps = np.full(len(points), np.inf)
     while len(chosen) < most and gaps[farthest] > 0.0:
         chosen.append(farthest)

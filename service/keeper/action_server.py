@@ -10,7 +10,16 @@ import zmq
 from zmq.utils.monitor import recv_monitor_message
 
 from nearhand.service.bus.codec import decode, encode
-from nearhand.service.bus.control_messages import CONTROL_REPLIES, Arm, ControlReply, Drain, DrainReply, Latch, Load
+from nearhand.service.bus.control_messages import (
+    CONTROL_REPLIES,
+    Accompany,
+    Arm,
+    ControlReply,
+    Drain,
+    DrainReply,
+    Latch,
+    Load,
+)
 from nearhand.service.bus.feed_messages import RigHealth
 from nearhand.service.bus.message import ErrorReply, Message
 from nearhand.service.bus.sockets import BULK_QUEUE, connect, make_socket
@@ -107,6 +116,23 @@ class ActionServer:
         """Latch a rig; raises as :meth:`arm` does."""
         return self._ask(Latch(request=self._request(), rig=rig, who=who, why=why))
 
+    def accompany(self, rig: str, version: int) -> None:
+        """Have a version look on, or none (0).
+
+        Raises:
+            LinkError: no answer.
+            NearhandError: the server's own refusal.
+        """
+        versions = self._ledger.store.versions
+        row = versions.get(version) if version else None
+        self._ask(
+            Accompany(
+                request=self._request(), rig=rig, version=version, sha256=row.sha256 if row else "",
+                policy=versions.policy(version) if row else b"",
+            )
+        )  # fmt: skip
+        self._last_load = self._serial
+
     def turn(self) -> None:
         """Take in what has arrived and ask again when it is time; never waits for an answer to ``drain``."""
         while True:
@@ -121,7 +147,7 @@ class ActionServer:
         self._notice_losses()
         if self._drain is None and now_s >= self._next_drain_s:
             self._next_drain_s = now_s + DRAIN_INTERVAL_S
-            request = Drain(request=self._request(), after=self._after)
+            request = Drain(request=self._request(), after=self._after, shadows=self._stored_rows())
             try:
                 self.socket.send(encode(request), flags=zmq.NOBLOCK)
                 self._drain = (self._serial, self._after, now_s)
@@ -157,7 +183,7 @@ class ActionServer:
             except WireError as error:
                 self._ledger.counters[f"errors.{error.code}"] += 1
 
-    def _ask(self, request: Load | Arm | Latch) -> ControlReply:
+    def _ask(self, request: Load | Accompany | Arm | Latch) -> ControlReply:
         end_s = time.monotonic() + ANSWER_TIMEOUT_S
         if not self.socket.poll(round(1000 * ANSWER_TIMEOUT_S), zmq.POLLOUT):
             raise LinkError("the action server is not there; nothing was changed; try again", code="link.action_server")
@@ -204,6 +230,7 @@ class ActionServer:
                 return
         if reply.occurrences:
             self._record(reply)
+        self._record_shadows(reply)
         self._after = self._ledger.store.events.last_occurrence(reply.instance)
         self.counters = dict(reply.counters)
         for rig, state in reply.rigs.items():
@@ -227,8 +254,35 @@ class ActionServer:
                         detail=detail if isinstance(detail, dict) else {"detail": detail},
                     )
 
+    def _stored_rows(self) -> dict[str, int]:
+        """Return by rig the last row of its shadow that is stored of the server's present life."""
+        shadows = self._ledger.store.shadows
+        return {rig: shadows.last_number(row.shadow, self.instance) for rig, row in shadows.present().items()}
+
+    def _record_shadows(self, reply: DrainReply) -> None:
+        present = self._ledger.store.shadows.present() if reply.shadows else {}
+        for rig, told in reply.shadows.items():
+            row = present.get(rig)
+            if row is None or row.version != told.get("version") or not told.get("count"):
+                continue
+            with self._ledger.transaction():
+                self._ledger.store.shadows.append(
+                    row.shadow, reply.instance, int(told["first"]), int(told["count"]), bytes(told["would"]),
+                    bytes(told["done"]), bytes(told["driver"]),
+                )  # fmt: skip
+
     def _reconcile(self) -> None:
         now_s = time.monotonic()
+        present = self._ledger.store.shadows.present()
+        for name, state in self.states.items():
+            row = present.get(name)
+            wanted = row.version if row else 0
+            if state.get("shadow", 0) != wanted and now_s >= self._retry_s.get(f"{name}/shadow", 0.0):
+                try:
+                    self.accompany(name, wanted)
+                except NearhandError as error:
+                    self._retry_s[f"{name}/shadow"] = time.monotonic() + RETRY_S
+                    log_line(f"shadow-failed rig={name} code={error.code} message={error.message!r}")
         for name, digest in self._ledger.store.rigs.digests().items():
             version = self._ledger.store.versions.in_service(name)
             acting = self.states.get(name, {}).get("version")

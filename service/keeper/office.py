@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from importlib import metadata
 from typing import Any
 
-from nearhand.service.bus.desk_messages import DeskReply
+from nearhand.service.bus.desk_request import DeskReply
 from nearhand.service.config import ServiceSettings
 from nearhand.service.keeper.access import Access
 from nearhand.service.keeper.action_server import ActionServer

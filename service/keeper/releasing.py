@@ -6,7 +6,8 @@ import contextlib
 from collections.abc import Sequence
 from typing import Any
 
-from nearhand.service.bus.desk_messages import Deed, Release, ReleaseReply, Rollback, StandDown
+from nearhand.service.bus.desk_messages import Release, ReleaseReply, Rollback, StandDown
+from nearhand.service.bus.desk_request import Deed
 from nearhand.service.errors import ConflictError, NearhandError, RefusedError
 from nearhand.service.keeper.office import Office
 from nearhand.service.store.canonical import plain

@@ -9,6 +9,7 @@ from nearhand.service.clock import utc_now
 from nearhand.service.errors import StoreError
 from nearhand.service.store.database import Database
 from nearhand.service.store.schema_1 import SCHEMA_1
+from nearhand.service.store.schema_2 import SCHEMA_2
 
 
 @dataclass(frozen=True, slots=True)
@@ -20,7 +21,7 @@ class Migration:
     statements: tuple[str, ...]
 
 
-MIGRATIONS: tuple[Migration, ...] = (Migration(1, "first schema", SCHEMA_1),)
+MIGRATIONS: tuple[Migration, ...] = (Migration(1, "first schema", SCHEMA_1), Migration(2, "shadows", SCHEMA_2))
 
 _RECORD = """
 CREATE TABLE IF NOT EXISTS migrations (

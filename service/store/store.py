@@ -12,6 +12,7 @@ from nearhand.service.store.jobs import Jobs
 from nearhand.service.store.migrations import migrate
 from nearhand.service.store.releases import Releases
 from nearhand.service.store.rigs import Rigs
+from nearhand.service.store.shadows import Shadows
 from nearhand.service.store.versions import Versions
 
 
@@ -38,6 +39,7 @@ class Store:
         self.versions = Versions(self.database)
         self.jobs = Jobs(self.database)
         self.releases = Releases(self.database)
+        self.shadows = Shadows(self.database)
         self.events = Events(self.database)
 
     def close(self) -> None:

@@ -13,7 +13,6 @@ from nearhand.client.desk import Desk, Feed
 from nearhand.service.bus.codec import decode, encode
 from nearhand.service.bus.desk_messages import (
     DESK_REQUESTS,
-    DeskRequest,
     GetJob,
     JobReply,
     ListRigs,
@@ -24,6 +23,7 @@ from nearhand.service.bus.desk_messages import (
     Where,
     WhereReply,
 )
+from nearhand.service.bus.desk_request import DeskRequest
 from nearhand.service.bus.feed_messages import Event, Progress, RigHealth
 from nearhand.service.bus.message import ErrorReply, Message
 from nearhand.service.errors import ConfigError, ConflictError, LinkError, RefusedError
