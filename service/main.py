@@ -8,6 +8,7 @@ import os
 import socket
 import sys
 import tempfile
+import time
 from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import IO
@@ -22,6 +23,9 @@ from nearhand.service.supervisor import Supervisor
 
 #: The kernel's limit for the path of a local socket is 107 bytes; the longest name below it takes 14.
 MAX_SOCKET_FOLDER = 90
+#: How long a service that starts waits for one that is just ending in the same data folder.
+LOCK_PATIENCE_S = 3.0
+LOCK_RETRY_S = 0.05
 
 
 def log_line(text: str) -> None:
@@ -83,22 +87,39 @@ def make_settings(
     )
 
 
-def take_lock(settings: ServiceSettings) -> IO[str]:
-    """Lock the data folder for this process; the lock goes with the process, however it ends.
+def take_lock(data: Path, *, patience_s: float = LOCK_PATIENCE_S) -> IO[str]:
+    """Lock a data folder; the lock goes with the process and its children, however they end.
+
+    A file that a dead service has left holds nobody up: what counts is the kernel's lock on it, not its content.
+
+    Args:
+        data: the data folder; its ``run`` folder exists.
+        patience_s: how long to wait for the processes of a service that is just ending.
 
     Raises:
         StoreError: another service holds it.
     """
-    stream = (settings.run / "lock").open("a+", encoding="utf-8")
-    try:
-        fcntl.flock(stream, fcntl.LOCK_EX | fcntl.LOCK_NB)
-    except OSError as error:
-        stream.close()
-        raise StoreError(
-            f"the data folder {settings.data} is in use by another service; stop that one or give another --data",
-            code="store.in_use",
-        ) from error
-    return stream
+    stream = (data / "run" / "lock").open("a+", encoding="utf-8")
+    end_s = time.monotonic() + patience_s
+    while True:
+        try:
+            fcntl.flock(stream, fcntl.LOCK_EX | fcntl.LOCK_NB)
+        except OSError as error:
+            if time.monotonic() < end_s:
+                time.sleep(LOCK_RETRY_S)
+                continue
+            stream.seek(0)
+            holder = stream.read(20).strip() or "unknown"
+            stream.close()
+            raise StoreError(
+                f"the data folder {data} is in use by another service (process {holder}); stop that one or give "
+                "another --data",
+                code="store.in_use",
+            ) from error
+        stream.truncate(0)
+        stream.write(f"{os.getpid()}\n")
+        stream.flush()
+        return stream
 
 
 def run_service(settings: ServiceSettings, *, on_ready: Callable[[ServiceSettings], None]) -> None:
@@ -111,11 +132,11 @@ def run_service(settings: ServiceSettings, *, on_ready: Callable[[ServiceSetting
     Raises:
         StoreError: the folder is in use, or a process could not start.
     """
-    with take_lock(settings):
+    with take_lock(settings.data) as lock:
         settings_file = settings.run / "settings.json"
         settings_file.write_text(json.dumps(settings.model_dump(mode="json"), indent=1), encoding="utf-8")
         stop = StopSignal()
-        supervisor = Supervisor(settings_file, log=log_line)
+        supervisor = Supervisor(settings_file, log=log_line, inherited=[lock.fileno()])
         supervisor.start()
         on_ready(settings)
         supervisor.run(stop)

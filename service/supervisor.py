@@ -12,7 +12,7 @@ import signal
 import subprocess
 import sys
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Collection
 from dataclasses import dataclass, field
 from pathlib import Path
 
@@ -55,11 +55,13 @@ class Supervisor:
     Args:
         settings_file: what each process reads at its start.
         log: receives one line per start, end and restart.
+        inherited: descriptors that each process keeps open: the lock then lasts as long as any of them.
     """
 
-    def __init__(self, settings_file: Path, *, log: Callable[[str], None]) -> None:
+    def __init__(self, settings_file: Path, *, log: Callable[[str], None], inherited: Collection[int] = ()) -> None:
         self._settings_file = settings_file
         self._log = log
+        self._inherited = tuple(inherited)
         self.children = [
             Child("action-server", "nearhand.service.action.process"),
             Child("keeper", "nearhand.service.keeper.process"),
@@ -90,17 +92,18 @@ class Supervisor:
             self.stop()
 
     def stop(self) -> None:
-        """Ask every process to end, the keeper first, and kill what does not within a few seconds."""
-        for child in reversed(self.children):
-            if child.process is not None and child.process.poll() is None:
-                child.process.terminate()
-        deadline_s = time.monotonic() + STOP_TIMEOUT_S
-        for child in reversed(self.children):
+        """Ask the processes to end, one after the other, and kill what does not within a few seconds.
+
+        The action server goes first: it latches its rigs, and the keeper is there to record it.
+        """
+        for child in self.children:
             if child.process is None:
                 continue
+            child.process.terminate()
             try:
-                child.process.wait(max(0.1, deadline_s - time.monotonic()))
+                child.process.wait(STOP_TIMEOUT_S)
             except subprocess.TimeoutExpired:
+                self._log(f"killed process={child.name} cause='it did not end within {STOP_TIMEOUT_S:g} s'")
                 child.process.kill()
                 child.process.wait()
             self._close(child)
@@ -115,9 +118,11 @@ class Supervisor:
                 "--ready-fd", str(ready_write),
                 "--parent", str(os.getpid()),
             ],
-            pass_fds=[ready_write],
+            pass_fds=[ready_write, *self._inherited],
             stdin=subprocess.DEVNULL,
             env={**os.environ, **THREAD_CAPS},
+            # Ctrl-C goes to the supervisor alone, which ends them in order.
+            process_group=0,
         )  # fmt: skip
         os.close(ready_write)
         child.pidfd = os.pidfd_open(child.process.pid)

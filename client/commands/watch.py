@@ -12,11 +12,17 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the options of ``watch``."""
     add_desk_options(parser)
     parser.add_argument("--once", action="store_true", help="show the present state once")
+    parser.add_argument("--metrics", action="store_true", help="print health and counters as OpenMetrics text")
 
 
 def run(options: argparse.Namespace) -> int:
     """Run ``watch``."""
     with open_desk(options) as desk:
+        if options.metrics:
+            from nearhand.client.metrics import open_metrics
+
+            print(open_metrics(desk.ask(GetHealth, HealthReply)), end="")
+            return 0
         if options.json:
             print_json(desk.ask(GetHealth, HealthReply).model_dump(exclude={"v", "kind", "request"}))
             return 0
