@@ -17,8 +17,6 @@ from nearhand.service.policy.format import PolicyFile
 from nearhand.service.rigs import Rig
 
 PERIOD_TOLERANCE = 1e-6
-#: Reasons of an observation that was not taken in.
-UNSEEN = int(Reason.FORM | Reason.OLD)
 TAKEN = int(Reason.TAKEN)
 
 
@@ -116,7 +114,7 @@ class DrivenRig:
         """Let the shadow look at what has just been answered."""
         if self.shadow is None:
             return
-        if decision.reasons & UNSEEN:
+        if not self.governor.seen:
             self.shadow.restart()
             return
         driver = BY_OPERATOR if decision.reasons & TAKEN else BY_POLICY if decision.mode == "armed" else BY_FALLBACK

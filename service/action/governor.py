@@ -65,6 +65,7 @@ class Governor:
     Attributes:
         mode: ``empty``, ``latched`` or ``armed``.
         version: the version in service, 0 for none.
+        seen: whether the last query's observation was taken in.
         observed, acted: the past, as policies see it: finite observations, and the action in force before each.
         reasons: why it is not armed.
         counts: queries, trips and interventions by name.
@@ -92,6 +93,7 @@ class Governor:
         self._previous = self._limits.rest.copy()
         self._last_seq = -1
         self._taken = False
+        self.seen = False
         self.mode: Mode = "empty"
         self.version = 0
         self.reasons = Reason.EMPTY
@@ -214,6 +216,7 @@ class Governor:
                 nothing is decided and strange observations do not trip: the operator may have gone there on purpose.
         """
         self.counts["queries"] += 1
+        self.seen = False
         if seq <= self._last_seq:
             self.counts["old"] += 1
             return Decision(self._previous, self.mode, self.version, int(self.reasons | Reason.OLD), self.novelty)
@@ -227,8 +230,8 @@ class Governor:
         if applied is not None:
             self._follow(applied)
         values = observation.tolist() if observation.shape == (self._n,) else [math.nan]
-        seen = math.isfinite(sum(values))
-        if seen:
+        self.seen = math.isfinite(sum(values))
+        if self.seen:
             self._remember(observation, values, now_ns)
         else:
             wrong |= FORM
@@ -237,7 +240,7 @@ class Governor:
             self.latch(Reason(wrong))
         proposed = None
         self.novelty = 1.0
-        if seen and self._serving is not None:
+        if self.seen and self._serving is not None:
             p_value = self._serving.look(self.observed, self.acted)
             proposed = self._serving.propose()
             if self._novelty is not None and self._epsilon < 1.0:

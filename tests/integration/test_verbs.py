@@ -14,6 +14,7 @@ import numpy as np
 import pytest
 
 from nearhand.client.desk import Desk
+from nearhand.client.link import RigLink
 from nearhand.client.tryout.service_process import ServiceProcess
 from nearhand.configs import builtin_text
 from nearhand.service.bus.desk_messages import (
@@ -74,6 +75,14 @@ def test_the_job_from_demonstrations_to_rollback(
         override = ["--override", "--why", "a test of the verbs", "--who", "ada"]
         assert run(service, "release", str(version), *override)["released"]
     assert run(service, "rearm", "--why", "area clear")["mode"] == "armed"
+    shadow = run(service, "shadow", str(versions[0]), "--why", "before it acts")
+    assert (shadow["version"], shadow["state"]) == (versions[0], "looking on")
+    with RigLink(rig_from_file(Path(short_crane)), service.lanes["action"]) as link:
+        while run(service, "shadow")["rows"] < 20:
+            for _ in range(30):
+                link.exchange(np.array([8, 0, 0, 0, 4, 2], dtype=np.float32))
+    ended = run(service, "shadow", "--stop")
+    assert ended["state"] == "ended" and "trolley-acceleration" in ended["beside"]["policy"]["figures"]
     back = run(service, "rollback", "--why", "a test", "--who", "ada")
     assert (back["version"], back["previous"]) == (versions[0], versions[1])
     assert run(service, "rearm", "--halt")["mode"] == "latched"
