@@ -7,7 +7,7 @@ escaped label values, counters that end in ``_total``, ``# EOF`` at the end.
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from typing import Any
 
 from nearhand.service.bus.desk_messages import HealthReply
@@ -56,7 +56,7 @@ def open_metrics(health: HealthReply) -> str:
 
 
 def _family(
-    lines: list[str], name: str, kind: str, unit: str, text: str, samples: list[tuple[Mapping[str, str], Any]]
+    lines: list[str], name: str, kind: str, unit: str, text: str, samples: Sequence[tuple[Mapping[str, str], Any]]
 ) -> None:
     if not samples:
         return

@@ -67,6 +67,11 @@ class ServiceProcess:
     def __exit__(self, *exc: object) -> None:
         self.stop()
 
+    @property
+    def number(self) -> int:
+        """The process number of the supervisor."""
+        return self._process.pid
+
     def process_number(self, module: str) -> int:
         """Return the process number of the child that runs a module (Linux).
 

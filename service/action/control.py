@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import time
 from collections import Counter
 from collections.abc import Mapping
 
@@ -29,6 +30,9 @@ class Control:
         rigs: the driven rigs by name; filled by ``load``.
         occurrences: where what happened is noted.
         instance: identifier of this process' life.
+
+    Attributes:
+        heard_ns: monotonic time at which the keeper asked last.
     """
 
     def __init__(
@@ -39,6 +43,7 @@ class Control:
         self._counters = counters
         self._clock = clock
         self._instance = instance
+        self.heard_ns = -(2**62)
 
     def do(self, message: Message) -> Message:
         """Carry out one request and return its reply.
@@ -47,6 +52,7 @@ class Control:
             NearhandError: it cannot be done; nothing has changed.
         """
         if isinstance(message, Drain):
+            self.heard_ns = time.monotonic_ns()
             return self._drain(message)
         if isinstance(message, Load):
             return self._load(message)
@@ -63,6 +69,13 @@ class Control:
             self._occurrences.note(message.rig, "latched", {"who": message.who, "why": message.why})
             return self._state(driven, message.request)
         raise WireError(f"{message.kind} is no control request", code="wire.kind")
+
+    def latch_all(self) -> None:
+        """Latch every rig, because the service ends."""
+        for name, driven in self._rigs.items():
+            driven.governor.latch(Reason.OPERATOR)
+            self._occurrences.note(name, "latched", {"who": "service", "why": "the service is stopping"})
+        self.collect()
 
     def _known(self, rig: str) -> DrivenRig:
         if rig not in self._rigs:

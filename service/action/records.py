@@ -27,6 +27,11 @@ class Occurrences:
             self._kept.popleft()
             self.lost += 1
 
+    @property
+    def is_empty(self) -> bool:
+        """Whether the keeper has taken over everything."""
+        return not self._kept
+
     def after(self, number: int, most: int) -> tuple[dict[str, Any], ...]:
         """Forget those up to ``number`` and return at most ``most`` of the rest, oldest first."""
         while self._kept and self._kept[0]["number"] <= number:

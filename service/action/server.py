@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import gc
 import select
+import time
 from collections import Counter
 from collections.abc import Callable
 from typing import Any, Protocol
@@ -37,6 +38,8 @@ from nearhand.service.errors import NearhandError, UnknownNameError, WireError
 BURST = 64
 #: Longest time between two looks of the watchdogs.
 IDLE_NS = 1_000_000_000
+#: Longest time that the end waits for the keeper to take over what happened last.
+LEAVE_NS = 1_000_000_000
 SEND_MORE = zmq.NOBLOCK | zmq.SNDMORE
 
 Socket = zmq.Socket[bytes]
@@ -86,6 +89,7 @@ class ActionServer:
         self._clock = clock
         self._rigs: dict[str, DrivenRig] = {}
         self._tick_ns = 0
+        self._leave_ns: int | None = None
         self._answered: list[tuple[DrivenRig, Decision]] = []
         self._occurrences = Occurrences()
         self._packer = msgpack.Packer(use_bin_type=True)
@@ -109,7 +113,7 @@ class ActionServer:
         self._control.close(linger=0)
 
     def run(self, stop: Stop) -> None:
-        """Serve until told to stop."""
+        """Serve until told to stop; then latch the rigs, and go on until the keeper has heard of it or had its time."""
         # Waiting on the library's own descriptors costs half of what its poller does. They tell of a change only once:
         # a socket is served until it has nothing, or asked again without waiting.
         with select.epoll() as poll, np.errstate(over="ignore", invalid="ignore"):
@@ -126,13 +130,24 @@ class ActionServer:
             for descriptor in lanes:
                 poll.register(descriptor, select.EPOLLIN)
             unfinished = set(lanes)
-            while not stop.stopped:
+            while not (stop.stopped and self._is_wound_down()):
                 for descriptor, _ in poll.poll(0.0 if unfinished else self._patience_s()):
-                    if descriptor in lanes and not self._serve(*lanes[descriptor]):
+                    if descriptor not in lanes:
+                        poll.unregister(descriptor)
+                    elif not self._serve(*lanes[descriptor]):
                         unfinished.add(descriptor)
                 unfinished = {descriptor for descriptor in unfinished if not self._serve(*lanes[descriptor])}
                 if (now_ns := self._clock.now_ns()) >= self._tick_ns:
                     self._tick(now_ns)
+
+    def _is_wound_down(self) -> bool:
+        now_ns = time.monotonic_ns()
+        if self._leave_ns is None:
+            heard = now_ns - self._control_room.heard_ns < LEAVE_NS
+            self._control_room.latch_all()
+            self._leave_ns = now_ns + LEAVE_NS if heard else now_ns
+            self._tick_ns = self._clock.now_ns()
+        return now_ns >= self._leave_ns or self._occurrences.is_empty
 
     def _patience_s(self) -> float:
         return max((self._tick_ns - self._clock.now_ns()) * 1e-9, 0.0)
