@@ -18,7 +18,8 @@ from nearhand.service.rigs import Rig
 if TYPE_CHECKING:
     from tests.action.conftest import Lane, Served
 
-RigWith, FileWith = Callable[..., Rig], Callable[..., PolicyFile]
+RigWith = Callable[..., Rig]
+FileWith = Callable[..., PolicyFile]
 
 
 def accompany(served: Served, version: int, file: PolicyFile | None) -> Any:
