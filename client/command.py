@@ -29,6 +29,7 @@ VERBS: dict[str, str] = {
     "rearm": "clear a latched trip, or latch a rig",
     "watch": "see the rigs live",
     "report": "write the evidence for a version as one page",
+    "backup": "back the data folder up while the service runs, or put a backup back",
     "keys": "give out keys with roles, list them, put them out of force",
     "bench": "measure this machine against references",
 }

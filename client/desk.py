@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import math
 import secrets
+import sys
 import time
 from collections.abc import Iterator
 from typing import Any, Self, TypeVar
@@ -14,7 +15,6 @@ from urllib.parse import urlsplit
 
 import zmq
 from pydantic import ValidationError
-from zmq.utils.monitor import recv_monitor_message
 
 from nearhand.service.bus.codec import decode, encode
 from nearhand.service.bus.desk_messages import DESK_REPLIES, Where, WhereReply
@@ -170,7 +170,8 @@ class Desk:
         """
         lost = False
         while self._monitor.poll(0):
-            event = recv_monitor_message(self._monitor)["event"]
+            # zmq_socket_monitor(3): the first frame begins with the event's number, 16 bits in the machine's order.
+            event = int.from_bytes(self._monitor.recv_multipart()[0][:2], sys.byteorder)
             lost |= event == zmq.EVENT_DISCONNECTED
             if event == zmq.EVENT_HANDSHAKE_FAILED_AUTH:
                 name = "" if self._key is None else self._key.name

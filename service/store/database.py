@@ -44,24 +44,36 @@ class Database:
     Args:
         path: the file; made if it does not exist, in a folder that does.
         busy_timeout_s: how long a write waits for another program's lock.
+        read_only: change nothing, not even in an empty file; the file exists.
 
     Raises:
         StoreError: the file cannot be opened, is damaged or belongs to something else.
     """
 
-    def __init__(self, path: Path, *, busy_timeout_s: float = BUSY_TIMEOUT_S) -> None:
+    def __init__(self, path: Path, *, busy_timeout_s: float = BUSY_TIMEOUT_S, read_only: bool = False) -> None:
         self.path = str(path)
         self._depth = 0
         try:
-            self._connection = sqlite3.connect(path, timeout=busy_timeout_s, isolation_level=None)
+            if read_only:
+                name = f"{path.absolute().as_uri()}?mode=ro"
+                self._connection = sqlite3.connect(name, timeout=busy_timeout_s, isolation_level=None, uri=True)
+            else:
+                self._connection = sqlite3.connect(path, timeout=busy_timeout_s, isolation_level=None)
         except sqlite3.Error as error:
             raise store_error(error, self.path) from error
         try:
             self._connection.row_factory = sqlite3.Row
-            self._prepare()
+            if read_only:
+                self._recognise()
+            else:
+                self._prepare()
         except BaseException:
             self._connection.close()
             raise
+
+    def _recognise(self) -> None:
+        if self.value("PRAGMA application_id") != APPLICATION_ID:
+            raise StoreError(f"database {self.path} is none of Nearhand's", code="store.foreign")
 
     def _prepare(self) -> None:
         owner = self.value("PRAGMA application_id")
@@ -84,6 +96,19 @@ class Database:
     def close(self) -> None:
         """Close the connection; an open transaction is rolled back."""
         self._connection.close()
+
+    def copy_to(self, path: Path) -> None:
+        """Copy the database, as it is at one moment, into a fresh file that stands alone; writers go on meanwhile.
+
+        Raises:
+            StoreError: reading or writing failed; what is in the file then is of no use.
+        """
+        try:
+            with contextlib.closing(sqlite3.connect(path, isolation_level=None)) as copy:
+                self._connection.backup(copy)
+                copy.execute("PRAGMA journal_mode = DELETE")
+        except sqlite3.Error as error:
+            raise store_error(error, str(path)) from error
 
     @property
     def in_transaction(self) -> bool:
