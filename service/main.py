@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import fcntl
 import json
 import os
@@ -29,8 +30,9 @@ LOCK_RETRY_S = 0.05
 
 
 def log_line(text: str) -> None:
-    """Write one log line to standard error."""
-    print(f"{utc_now()} {text}", file=sys.stderr, flush=True)
+    """Write one log line to standard error; a log on a full disk must stop nobody."""
+    with contextlib.suppress(OSError):
+        print(f"{utc_now()} {text}", file=sys.stderr, flush=True)
 
 
 def free_ports(host: str, count: int) -> list[int]:

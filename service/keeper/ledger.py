@@ -22,8 +22,9 @@ from nearhand.service.store.store import Store
 
 
 def log_line(text: str) -> None:
-    """Write one ``event key=value`` line to standard error."""
-    print(f"{utc_now()} {text}", file=sys.stderr, flush=True)
+    """Write one ``event key=value`` line to standard error; a log on a full disk must stop nobody."""
+    with contextlib.suppress(OSError):
+        print(f"{utc_now()} {text}", file=sys.stderr, flush=True)
 
 
 class Feed:

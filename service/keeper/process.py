@@ -36,6 +36,7 @@ class Keeper:
 
     Attributes:
         store: the records.
+        ledger: the records with all that must happen around a change.
 
     Raises:
         StoreError: the database cannot be used.
@@ -48,7 +49,7 @@ class Keeper:
         self.store = Store(settings.database)
         door = self._door = None if settings.keys is None else Admission(self._context, KeyFolder(settings.keys))
         feed = self._feed = Feed(self._context, settings.feed, door)
-        ledger = Ledger(self.store, feed)
+        ledger = self.ledger = Ledger(self.store, feed)
         self._access = Access(door, ledger)
         self._intake_lane = Lane(self._context, settings.intake, queue=INTAKE_QUEUE, admission=door, name="intake")
         self._desk_lane = Lane(self._context, settings.desk, queue=DESK_QUEUE, admission=door, name="desk")
