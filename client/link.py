@@ -12,6 +12,8 @@ magnitude, slew and braking limits, and waits for nobody; the server goes on see
 policy's permission: after the operator has handed back, the server's fallback acts until someone has re-armed. Whoever
 wants the policy to follow on without a stop re-arms before handing back.
 
+The clock should never be set; if it is set back all the same, leases end at once.
+
 A program that stops calling ``exchange`` cannot be helped from here: the server's deadline catches it, and the drive
 must stop when its commands cease.
 """
@@ -109,6 +111,7 @@ class RigLink:
         self._replaced = False
         self._hello_at_ns = 0
         self._seq = 0
+        self._last_ns = 0
         self._held = self._limits.rest.copy()
         self._held_until_ns: int | None = None
         self._version = 0
@@ -158,6 +161,9 @@ class RigLink:
                 wrong size or not finite then counts as no hand on the lever: the fallback acts.
         """
         begin_ns = self._clock.now_ns()
+        if begin_ns < self._last_ns:
+            self._forget_times(begin_ns)
+        self._last_ns = begin_ns
         seen = self._vector(observation)
         usable = bool(np.isfinite(seen).all())
         if usable:
@@ -350,6 +356,13 @@ class RigLink:
         self._held = self._fallback.act(self._held, now_ns)
         reasons = Reason.LINK | Reason.LATCHED | self._standing
         return Drive(self._held, "latched", 0, int(reasons), 1.0, False, 0.0)
+
+    def _forget_times(self, now_ns: int) -> None:
+        """The clock has been set back: nothing that was to end at an earlier time may last longer for it."""
+        if self._held_until_ns is not None:
+            self._held_until_ns = now_ns
+        self._silent_until_ns = min(self._silent_until_ns, now_ns + self._silence_ns())
+        self._hello_at_ns = 0
 
     def _silence_ns(self) -> int:
         """Return how long the server must hear nothing to be surely latched."""

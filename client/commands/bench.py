@@ -13,6 +13,7 @@ from nearhand.service.errors import ConfigError
 BENCHES = {
     "action-latency": "nearhand.client.bench_action",
     "curve-cost": "nearhand.client.bench_curve",
+    "faults": "nearhand.client.faults.campaign",
     "novelty": "nearhand.client.bench_novelty",
 }
 #: What may be told to a benchmark that takes it.

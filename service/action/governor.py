@@ -165,7 +165,8 @@ class Governor:
             return
         self.mode, self.reasons = "armed", Reason.NONE
         self._low_values.clear()
-        self._watchdog.pause()
+        # Also the quickest transit: a rig's clock that was set back would look late for ever.
+        self._watchdog.forget()
         self._fallback.end()
 
     def latch(self, reason: Reason) -> None:

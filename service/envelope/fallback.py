@@ -57,8 +57,9 @@ class FallbackAction:
             previous: (m,) the action in force, inside the range.
             now_ns: monotonic time.
         """
-        if self._since_ns is None:
-            self._since_ns = now_ns
+        if self._since_ns is None or now_ns < self._since_ns:
+            # A clock that was set back must not prolong the hold.
+            self._since_ns = now_ns if self._since_ns is None else now_ns - round(self._limits.hold_s * 1e9)
         self._estimate(previous, now_ns)
         if (now_ns - self._since_ns) * 1e-9 < self._limits.hold_s:
             return previous.copy()
