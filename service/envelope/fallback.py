@@ -17,6 +17,8 @@ from nearhand.service.envelope.limits import Float32, Limits
 
 #: A speed is estimated forward over at most this long at once; a longer silence tells nothing of what was applied.
 LONGEST_ESTIMATE_S = 1.0
+#: A speed is doubted after so many reaction times of braking, if it shows less than this share of the effect.
+DOUBT, ANSWER = 4.0, 0.3
 
 
 class FallbackAction:
@@ -24,7 +26,8 @@ class FallbackAction:
 
     ``rest`` commands the rest action at once: the slew limit does not apply to it, the range does. ``ramp`` goes there
     at the fallback's rate, never faster than slew, one step per call: call it once per control period. ``hold`` keeps
-    the last action for a bounded time, then ramps. Braking axes are brought to standstill in place of ``rest``.
+    the last action for a bounded time, then ramps. Braking axes are brought to standstill in place of ``rest``; a speed
+    that does not answer to the braking is not believed.
 
     Args:
         limits: the rig's limits.
@@ -35,6 +38,8 @@ class FallbackAction:
         self._speeds = [0.0] * len(limits.axes)
         self._speeds_ns: int | None = None
         self._since_ns: int | None = None
+        self._begun_speeds, self._reckoned = list(self._speeds), list(self._speeds)
+        self._reckoned_ns = 0
 
     def see(self, observation: Sequence[float] | NDArray[np.floating], now_ns: int) -> None:
         """Note the axes' speeds from a finite observation (n,)."""
@@ -57,18 +62,42 @@ class FallbackAction:
             previous: (m,) the action in force, inside the range.
             now_ns: monotonic time.
         """
+        begins = self._since_ns is None
         if self._since_ns is None or now_ns < self._since_ns:
             # A clock that was set back must not prolong the hold.
             self._since_ns = now_ns if self._since_ns is None else now_ns - round(self._limits.hold_s * 1e9)
         self._estimate(previous, now_ns)
+        self._reckon(previous, now_ns, begins=begins)
         if (now_ns - self._since_ns) * 1e-9 < self._limits.hold_s:
             return previous.copy()
         target = self._limits.rest.copy()
-        for speed, axis in zip(self._speeds, self._limits.axes, strict=True):
-            target[axis.action] = towards_standstill(axis, speed, self._limits.period_s)
+        for index, axis in enumerate(self._limits.axes):
+            target[axis.action] = towards_standstill(axis, self._believed_speed(index), self._limits.period_s)
         if self._limits.at_once:
             return np.minimum(np.maximum(target, self._limits.low), self._limits.high)
         return slew(self._limits, target, previous, self._limits.ramp_step)
+
+    def _reckon(self, previous: Float32, now_ns: int, *, begins: bool) -> None:
+        """Keep an account of the speeds that the actions since the fallback's begin should have brought."""
+        if begins:
+            self._begun_speeds, self._reckoned = list(self._speeds), list(self._speeds)
+        elif now_ns > self._reckoned_ns:
+            passed_s = min((now_ns - self._reckoned_ns) * 1e-9, LONGEST_ESTIMATE_S)
+            for index, axis in enumerate(self._limits.axes):
+                self._reckoned[index] += float(previous[axis.action]) * passed_s
+        self._reckoned_ns = now_ns
+
+    def _believed_speed(self, index: int) -> float:
+        """Return an axis' speed as observed, or as reckoned where the observed one does not answer to the braking.
+
+        A sensor that is stuck would else have the axis driven backwards for ever.
+        """
+        axis, speed = self._limits.axes[index], self._speeds[index]
+        expected = self._reckoned[index] - self._begun_speeds[index]
+        doubtful = abs(expected) > axis.deceleration * DOUBT * (self._limits.period_s + axis.reaction_s)
+        if axis.accelerates and doubtful and abs(speed - self._begun_speeds[index]) < ANSWER * abs(expected):
+            return self._reckoned[index]
+        return speed
 
     def _estimate(self, previous: Float32, now_ns: int) -> None:
         """Advance the accelerated axes' speeds to now."""

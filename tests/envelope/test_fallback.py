@@ -88,3 +88,23 @@ def test_an_axis_driven_by_speed_is_told_to_stand(rig_with: RigWith) -> None:
     fallback = FallbackAction(Limits.of(rig_with(braking={"drives": "velocity"}, fallback={"kind": "rest"})))
     fallback.see(vector(0.0, 1.0), 0)
     assert fallback.act(vector(0.6, 0.1), PERIOD_NS)[0] == 0.0
+
+
+@pytest.mark.parametrize("speed", [-0.9, 0.9])
+@pytest.mark.parametrize(("gain", "stuck", "residue"), [(1.0, False, 0.03), (0.5, False, 0.03), (1.0, True, 0.1)])
+def test_it_comes_to_rest_though_the_drive_is_weak_or_the_speed_is_stuck(
+    rig_with: RigWith, speed: float, gain: float, stuck: bool, residue: float
+) -> None:
+    limits = Limits.of(rig_with(fallback={"kind": "ramp", "ramp_per_s": 2.0}))
+    (axis,) = limits.axes
+    assert axis.accelerates
+    fallback = FallbackAction(limits)
+    action, true, lowest = limits.rest.copy(), speed, abs(speed)
+    for period in range(1000):
+        observed = np.zeros(8)
+        observed[axis.velocity] = speed if stuck else true
+        fallback.see(observed, period * PERIOD_NS)
+        action = fallback.act(action, period * PERIOD_NS)
+        true += gain * float(action[axis.action]) * 1e-9 * PERIOD_NS
+        lowest = min(lowest, true * np.sign(speed))
+    assert abs(true) < residue and lowest > -residue
