@@ -105,8 +105,8 @@ class Campaign:
 
     def run(self, count: int) -> None:
         """Drive until ``count`` faults were injected and lived through."""
-        kinds = [*KINDS] * (count // len(KINDS) + 1)
-        self._generator.shuffle(kinds)
+        rounds = range(count // len(KINDS) + 1)
+        kinds = [kind for _ in rounds for kind in self._generator.sample([*KINDS], len(KINDS))]
         with Operator(self._desk, self._rig.name, self._oracle.permit) as operator:
             self._operator = operator
             try:
