@@ -171,7 +171,8 @@ def read_policy(data: bytes, *, expected_sha256: str | None = None) -> PolicyFil
         past_observations=past_observations,
         past_actions=past_actions,
     )
-    difference = float(np.max(np.abs(policy.mean(tensors["probe.window"]) - tensors["probe.action"])))
+    with np.errstate(over="ignore", invalid="ignore"):  # a damaged weight may overflow: the difference then tells
+        difference = float(np.max(np.abs(policy.mean(tensors["probe.window"]) - tensors["probe.action"])))
     if not difference <= PROBE_TOLERANCE * max(1.0, float(np.max(np.abs(tensors["probe.action"])))):
         raise PolicyFormatError(f"policy file: probe actions differ by {difference:.2g}; it would not act as trained")
     novelty = {name.removeprefix("novelty."): tensors[name] for name in tensors if name.startswith("novelty.")}

@@ -59,7 +59,7 @@ def test_the_oracle_lets_a_good_course_pass(crane: Rig) -> None:
         ([(0.1, "latched", {"speed": 1.0})] * 80, "drives on"),
         ([(0.0, "latched", {"speed": 1.0})] * 800, "is still"),
     ],
-    ids=str,
+    ids=["range", "finite", "slew", "permission", "braking", "drives on", "stands"],
 )
 def test_the_oracle_sees_each_wrong(crane: Rig, steps: list[tuple[float, str, dict[str, Any]]], word: str) -> None:
     violations = judged(crane, *steps)
