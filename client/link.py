@@ -373,4 +373,5 @@ def _changes(limited: Limited) -> Reason:
     """Return what the limits changed."""
     flags = Reason.CLIPPED if limited.clipped else Reason.NONE
     flags |= Reason.SLEWED if limited.slewed else Reason.NONE
-    return flags | (Reason.BRAKED if limited.braked else Reason.NONE)
+    flags |= Reason.BRAKED if limited.braked else Reason.NONE
+    return flags | (Reason.ZONED if limited.zoned else Reason.NONE)

@@ -102,6 +102,28 @@ class Braking(Frozen):
         return self
 
 
+class Inequality(Frozen):
+    """A weighted sum of observation channels that is ``at_least`` or ``at_most`` a number, in the channels' units."""
+
+    of: dict[Name, FiniteFloat] = Field(min_length=1, max_length=16)
+    at_least: FiniteFloat | None = None
+    at_most: FiniteFloat | None = None
+
+    @model_validator(mode="after")
+    def _one_side(self) -> Self:
+        if (self.at_most is None) == (self.at_least is None):
+            raise ValueError("an inequality needs exactly one of at_least and at_most")
+        return self
+
+
+class Zone(Frozen):
+    """A forbidden zone: where all inequalities hold. The action may not lead there within ``ahead_s`` (or a lease)."""
+
+    name: Name
+    inside: tuple[Inequality, ...] = Field(min_length=1, max_length=8)
+    ahead_s: Annotated[FiniteFloat, Field(ge=0, le=10)] = 0.0
+
+
 class Novelty(Frozen):
     """Confidence gate: ``trip_m`` low p-values of the last ``window_n`` trip, in at most ``epsilon`` of episodes."""
 
@@ -158,6 +180,8 @@ class Rig(Frozen):
     timing: Timing
     fallback: Fallback = Fallback()
     braking: tuple[Braking, ...] = ()
+    zones: tuple[Zone, ...] = Field(default=(), max_length=16)
+    rates: dict[Name, str] = Field(default_factory=dict)
     novelty: Novelty = Novelty()
     history: History = History()
     simulator: Plant | None = None
@@ -186,9 +210,36 @@ class Rig(Frozen):
                     f"braking of {axis.position}: {axis.action} ranges over [{low}, {high}] and so cannot decelerate "
                     "both ways; its range must reach below and above 0"
                 )
+        self._check_zones(observed, acted)
         if self.expert is not None and self.expert not in self.experts:
             raise ValueError(f"expert = {self.expert!r} is not among experts {sorted(self.experts)}")
         return self
+
+    def _check_zones(self, observed: set[str], acted: set[str]) -> None:
+        for channel, rate in self.rates.items():
+            name = rate.removeprefix("-")
+            if channel not in observed or name not in observed | acted or name == channel:
+                raise ValueError(
+                    f"rates: {channel} = {rate!r}: expected an observation channel and what it changes with, another "
+                    "observation or an action, with a minus sign if it falls with it"
+                )
+        for zone in self.zones:
+            for name in {name for inequality in zone.inside for name in inequality.of}:
+                if name not in observed:
+                    raise ValueError(f"zone {zone.name}: {name!r} is no observation channel")
+            if not any(self._is_moved(name, acted) for inequality in zone.inside for name in inequality.of):
+                raise ValueError(
+                    f"zone {zone.name}: no action moves any of its channels; say under [rates] what changes them, "
+                    'for example "position" = "velocity" and "velocity" = "acceleration"'
+                )
+
+    def _is_moved(self, channel: str, acted: set[str]) -> bool:
+        """Tell whether an action moves a channel, by its rates; a circle of rates moves nothing."""
+        for _ in range(len(self.rates)):
+            channel = self.rates.get(channel, "").removeprefix("-")
+            if channel in acted:
+                return True
+        return False
 
     def digest(self) -> str:
         """Return the SHA-256 of the resolved description, hexadecimal, as stored with versions and measurements."""

@@ -27,7 +27,9 @@ from nearhand.service.rigs import Rig
 
 FORM, LATE = int(Reason.FORM), int(Reason.LATE)
 #: What the limits may have done, in the order of ``Limited``.
-LIMITS = tuple((int(reason), str(reason.name).lower()) for reason in (Reason.CLIPPED, Reason.SLEWED, Reason.BRAKED))
+LIMITS = tuple(
+    (int(reason), str(reason.name).lower()) for reason in (Reason.CLIPPED, Reason.SLEWED, Reason.BRAKED, Reason.ZONED)
+)
 
 
 class Decision(NamedTuple):
@@ -254,7 +256,7 @@ class Governor:
         changed = 0
         if proposed is not None and self.mode == "armed":
             limited = limit(self._limits, proposed, self._previous, values, self._guards)
-            if limited.clipped or limited.slewed or limited.braked:
+            if limited.clipped or limited.slewed or limited.braked or limited.zoned:
                 changed = self._intervened(limited)
             action = limited.action
         else:

@@ -39,7 +39,9 @@ def main() -> int:
     try:
         settings = read_settings(options.settings)
         door = None if settings.keys is None else Admission(context, KeyFolder(settings.keys))
-        server = ActionServer(context, settings.action, settings.control, MonotonicClock(), secrets.token_hex(8), door)
+        server = ActionServer(
+            context, settings.action, settings.control, MonotonicClock(), secrets.token_hex(8), door, settings.limits
+        )
     except NearhandError as error:
         print(f"{utc_now()} failed process=action-server code={error.code} message={error.message!r}", file=sys.stderr)
         context.destroy(linger=0)

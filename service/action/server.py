@@ -28,6 +28,7 @@ from nearhand.service.bus.admission import Admission
 from nearhand.service.bus.arrays import WIRE_DTYPE
 from nearhand.service.bus.codec import decode_map, encode, from_map
 from nearhand.service.bus.control_messages import CONTROL_REQUESTS
+from nearhand.service.bus.limits import USUAL, Limits
 from nearhand.service.bus.message import PROTOCOL_VERSION, ErrorReply
 from nearhand.service.bus.queries import Query
 from nearhand.service.bus.sockets import ACTION_QUEUE, BULK_QUEUE, bind, make_socket
@@ -72,6 +73,7 @@ class ActionServer:
         clock: the receiver's clock.
         instance: identifier of this process' life.
         admission: the door that the action lane stands behind, where the service has keys.
+        limits: what the action lane takes in.
 
     Raises:
         ConfigError: an address cannot be bound.
@@ -85,7 +87,9 @@ class ActionServer:
         clock: Clock,
         instance: str,
         admission: Admission | None = None,
+        limits: Limits = USUAL,
     ) -> None:
+        self._limits = limits
         self._clock = clock
         self._rigs: dict[str, DrivenRig] = {}
         self._tick_ns = 0
@@ -98,6 +102,7 @@ class ActionServer:
         self._action = make_socket(context, zmq.ROUTER, queue=ACTION_QUEUE, role="bind")
         # The library hears about once a millisecond that replies have left: a short queue would drop the next ones.
         self._action.setsockopt(zmq.SNDHWM, BULK_QUEUE)
+        self._action.setsockopt(zmq.MAXMSGSIZE, limits.frame_bytes)
         self._receive: Receive = self._action.recv_multipart
         self._reply_to = self._answer
         if admission is not None:
@@ -195,7 +200,7 @@ class ActionServer:
             if query is not None:
                 seq = query.seq
                 return self._act(query)
-            table = decode_map(frame)
+            table = decode_map(frame, self._limits)
             seq = table.get("seq")
             message = from_map(table, ACTION_REQUESTS)
             if isinstance(message, Act):

@@ -31,6 +31,7 @@ class Reason(IntFlag):
     EMPTY = 4096  #: no version is in service
     LINK = 8192  #: set by the rig-side link: no usable reply in time
     TAKEN = 16384  #: the operator drives: they have taken the rig over
+    ZONED = 32768  #: limited so that the machine keeps out of a forbidden zone
 
 
 def reason_names(flags: int) -> list[str]:

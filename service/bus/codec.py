@@ -8,12 +8,12 @@ from typing import Any
 import msgpack
 from pydantic import ValidationError
 
+from nearhand.service.bus.limits import MAX_FRAME_BYTES, USUAL, Limits
 from nearhand.service.bus.message import PROTOCOL_VERSION, Message
 from nearhand.service.errors import WireError
 from nearhand.service.rigs import sentence
 
-MAX_FRAME_BYTES = 8 * 1024 * 1024
-MAX_ITEMS = 100_000
+__all__ = ["MAX_FRAME_BYTES", "decode", "decode_map", "encode", "from_map"]
 
 
 def encode(message: Message) -> bytes:
@@ -28,15 +28,15 @@ def _unique_keys(pairs: list[tuple[Any, Any]]) -> dict[str, Any]:
     return table
 
 
-def decode_map(frame: bytes) -> dict[str, Any]:
+def decode_map(frame: bytes, limits: Limits = USUAL) -> dict[str, Any]:
     """Return the map in a frame, limited in size, depth and item counts.
 
     Raises:
         WireError: the frame is oversized or no MessagePack map with string keys.
     """
-    if len(frame) > MAX_FRAME_BYTES:
+    if len(frame) > limits.frame_bytes:
         raise WireError(
-            f"frame of {len(frame)} bytes is over the limit of {MAX_FRAME_BYTES}; send smaller chunks",
+            f"frame of {len(frame)} bytes is over the limit of {limits.frame_bytes}; send smaller chunks",
             code="wire.oversized",
         )
     try:
@@ -46,10 +46,10 @@ def decode_map(frame: bytes) -> dict[str, Any]:
             use_list=False,
             strict_map_key=True,
             object_pairs_hook=_unique_keys,
-            max_str_len=1024 * 1024,
-            max_bin_len=MAX_FRAME_BYTES,
-            max_array_len=MAX_ITEMS,
-            max_map_len=MAX_ITEMS,
+            max_str_len=limits.text_bytes,
+            max_bin_len=limits.frame_bytes,
+            max_array_len=limits.items,
+            max_map_len=limits.items,
             max_ext_len=0,
         )
     except (ValueError, msgpack.exceptions.UnpackException, TypeError, RecursionError) as error:
@@ -57,7 +57,20 @@ def decode_map(frame: bytes) -> dict[str, Any]:
         raise WireError(f"frame is no MessagePack map: {detail}", code="wire.malformed") from error
     if not isinstance(table, dict):
         raise WireError(f"frame holds a {type(table).__name__}; expected a map", code="wire.malformed")
+    if _is_deeper(table, limits.depth):
+        raise WireError(f"the message nests deeper than {limits.depth} maps and lists", code="wire.depth")
     return table
+
+
+def _is_deeper(table: dict[str, Any], most: int) -> bool:
+    """Return whether maps and lists lie within each other more than so many deep."""
+    level: list[Any] = [table]
+    for _ in range(most):
+        inner = [item for box in level for item in (box.values() if type(box) is dict else box)]
+        level = [item for item in inner if type(item) is dict or type(item) is tuple]
+        if not level:
+            return False
+    return True
 
 
 def decode(frame: bytes, kinds: Mapping[str, type[Message]]) -> Message:

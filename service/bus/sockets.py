@@ -10,8 +10,8 @@ from urllib.parse import urlsplit
 
 import zmq
 
-from nearhand.service.bus.codec import MAX_FRAME_BYTES
 from nearhand.service.bus.keys import ClientKey
+from nearhand.service.bus.limits import MAX_FRAME_BYTES
 from nearhand.service.errors import ConfigError, LinkError
 
 HEARTBEAT_MS = 2_000

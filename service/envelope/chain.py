@@ -1,7 +1,7 @@
-"""The chain of limits that every action goes through: magnitude, slew, braking, in this order.
+"""The chain of limits that every action goes through: magnitude, slew, zones, braking, in this order.
 
-Which limit wins: from a previous action inside the range, magnitude and slew always hold. Braking only ever moves the
-action towards what it allows as fast as slew lets it; it looks ahead by the time that this takes.
+Which limit wins: from a previous action inside the range, magnitude and slew always hold. Zones and braking only ever
+move the action towards what they allow as fast as slew lets it; they look ahead. Braking has the last word over zones.
 """
 
 from __future__ import annotations
@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 
 from nearhand.service.envelope.braking import Guards
 from nearhand.service.envelope.limits import Float32, Limits
+from nearhand.service.envelope.zones import Zones
 
 
 class Limited(NamedTuple):
@@ -23,6 +24,7 @@ class Limited(NamedTuple):
     clipped: bool
     slewed: bool
     braked: bool
+    zoned: bool = False
 
 
 def limit(
@@ -32,13 +34,13 @@ def limit(
     observation: Sequence[float] | NDArray[np.floating] | None,
     guards: Guards | None = None,
 ) -> Limited:
-    """Apply magnitude, slew and braking to a finite proposal.
+    """Apply magnitude, slew, zones and braking to a finite proposal.
 
     Args:
         proposed: (m,) finite, in the rig's units.
         previous: (m,) the action in force, inside the range.
-        observation: (n,) finite, or None when there is none to brake by.
-        guards: of the rig's axes, with their past; None leaves braking out.
+        observation: (n,) finite, or None when there is none to go by.
+        guards: of the rig's axes, with their past; None leaves zones and braking out.
 
     Returns:
         The action: inside the range, and at most one slew step from ``previous``.
@@ -60,14 +62,30 @@ def limit(
             wanted = least if inside < least else most if inside > most else inside
             slewed = slewed or abs(wanted - inside) > rounding
         action.append(wanted)
-    braked = False
+    braked = zoned = False
+    if limits.zones is not None and guards is not None and observation is not None:
+        zoned = _keep_out(limits.zones, limits, action, previous, observation)
     if limits.axes and guards is not None and observation is not None:
         braked = guards.keep(action, observation)
         if braked:
             for index, (low, high, step, _) in enumerate(limits.channels):
                 before = float(previous[index])
                 action[index] = min(max(action[index], low, before - step), high, before + step)
-    return Limited(np.array(action, dtype=np.float32), clipped, slewed, braked)
+    return Limited(np.array(action, dtype=np.float32), clipped, slewed, braked, zoned)
+
+
+def _keep_out(
+    zones: Zones,
+    limits: Limits,
+    action: list[float],
+    previous: Float32,
+    observation: Sequence[float] | NDArray[np.floating],
+) -> bool:
+    """Let the zones change ``action`` in place within magnitude and slew; tell whether they did."""
+    before = previous.tolist()
+    low = [max(least, one - step) for one, (least, _, step, _) in zip(before, limits.channels, strict=True)]
+    high = [min(most, one + step) for one, (_, most, step, _) in zip(before, limits.channels, strict=True)]
+    return zones.keep(action, [float(value) for value in observation], low, high)
 
 
 def slew(limits: Limits, wanted: Float32, previous: Float32, step: Float32 | None = None) -> Float32:

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from nearhand.service.envelope.zones import Zones
 from nearhand.service.rigs import Rig
 
 Float32 = NDArray[np.float32]
@@ -43,6 +44,7 @@ class Limits:
         at_once: the fallback commands rest at once, whatever the slew.
         hold_s: how long the fallback first holds the last action.
         channels: low, high, slew step and rounding of each action channel, as plain numbers.
+        zones: the forbidden zones, None where there are none.
         period_s, lease_s: see :class:`nearhand.service.rigs.Timing`.
         axes: the braking axes.
     """
@@ -59,6 +61,7 @@ class Limits:
     lease_s: float
     axes: tuple[Axis, ...]
     channels: tuple[tuple[float, float, float, float], ...]
+    zones: Zones | None = None
 
     @classmethod
     def of(cls, rig: Rig) -> Limits:
@@ -99,6 +102,7 @@ class Limits:
             lease_s=rig.timing.lease_s,
             axes=axes,
             channels=tuple((one[0], one[1], one[2], one[3]) for one in columns),
+            zones=Zones(rig) if rig.zones else None,
         )
 
 

@@ -214,7 +214,7 @@ def test_a_vector_of_the_wrong_size_is_named(data: bytes | tuple[float, ...]) ->
 def test_reasons_have_the_bits_of_the_wire_page() -> None:
     names = [
         "form", "old", "gap", "late", "novel", "output", "clipped", "slewed", "braked", "latched", "restarted",
-        "operator", "empty", "link", "taken",
+        "operator", "empty", "link", "taken", "zoned",
     ]  # fmt: skip
     assert {name: 1 << bit for bit, name in enumerate(names)} == {
         str(reason.name).lower(): int(reason) for reason in Reason if reason

@@ -44,7 +44,7 @@ def judged(rig: Rig, *steps: tuple[float, str, dict[str, Any]]) -> list[str]:
 
 
 def test_the_oracle_lets_a_good_course_pass(crane: Rig) -> None:
-    rising = [(0.1 * k, "armed", {}) for k in range(6)]
+    rising: list[tuple[float, str, dict[str, Any]]] = [(0.1 * k, "armed", {}) for k in range(6)]
     assert judged(crane, *rising, (0.4, "latched", {}), (0.3, "armed", {"permit": True})) == []
 
 
