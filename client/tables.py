@@ -11,6 +11,8 @@ from nearhand.service.bus.desk_messages import ReleaseReply
 if TYPE_CHECKING:
     from rich.console import RenderableType
 
+    from nearhand.service.envelope.budget import AxisBudget
+
 
 def show(*parts: RenderableType) -> None:
     """Print tables and text to standard output."""
@@ -83,6 +85,28 @@ def gate_table(reply: ReleaseReply) -> RenderableType:
         table.add_row("yes" if bound.get("met") else "NO", str(bound.get("sentence", "")))
     verdict = f"version {reply.version} is in service" if reply.released else f"version {reply.version} was refused"
     return Group(Text(f"{verdict}. {reply.message}".strip()), table) if reply.bounds else Text(verdict)
+
+
+def budget_table(budgets: Iterable[AxisBudget], title: str) -> RenderableType:
+    """Return the envelope's budget: from the last good observation at full speed to standstill, term by term."""
+    from rich import box
+    from rich.table import Table
+
+    table = Table(box=box.SIMPLE_HEAD, pad_edge=False, padding=(0, 1, 0, 0), title=title, title_justify="left")
+    table.add_column("towards")
+    for name in ("term", "s", "way", "speed left"):
+        table.add_column(name, justify="left" if name == "term" else "right", no_wrap=name != "term")
+    for budget in budgets:
+        towards = f"{budget.axis} {budget.end}, limit {budget.limit:g} {budget.unit}"
+        for term in budget.terms:
+            table.add_row(towards, term.name, f"{term.seconds:.3f}", f"{term.travel:.3f}", f"{term.speed:.3f}")
+            towards = ""
+        table.add_row(
+            "", f"in all, from {budget.full_speed:g}", f"{budget.seconds:.3f}", f"{budget.travel:.3f}", "", style="bold"
+        )
+        table.add_row("", f"full speed only up to {budget.brakes_from:.3g} {budget.unit}", "", "", "")
+        table.add_row("", f"at most {budget.speed_at_range_end:.3g} at the range's end", "", "", "", end_section=True)
+    return table
 
 
 def inspection_tables(result: Mapping[str, Any], *, most: int | None = None) -> tuple[RenderableType, ...]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import deque
 from typing import Any
 
 import numpy as np
@@ -40,6 +41,8 @@ class DrivenRig:
         self._counted_ns = clock.now_ns()
         self._counted = 0
         self._rate_hz = 0.0
+        #: (time, interventions so far), over the last minute, at most once a second.
+        self._interventions: deque[tuple[int, int]] = deque(maxlen=61)
 
     def hello(self, message: Hello) -> Welcome:
         """Begin a session.
@@ -123,7 +126,11 @@ class DrivenRig:
     def state(self) -> dict[str, Any]:
         """Return what the keeper shows of the rig."""
         now_ns = self._clock.now_ns()
-        queries = self.governor.counts["queries"]
+        queries, interventions = self.governor.counts["queries"], self.governor.counts["interventions"]
+        if not self._interventions or now_ns - self._interventions[-1][0] >= 1_000_000_000:
+            self._interventions.append((now_ns, interventions))
+        since_ns, before = self._interventions[0]
+        minutes = max(now_ns - since_ns, 1_000_000_000) / 60e9
         if now_ns - self._counted_ns > 500_000_000:
             self._rate_hz = (queries - self._counted) / ((now_ns - self._counted_ns) * 1e-9)
             self._counted_ns, self._counted = now_ns, queries
@@ -136,7 +143,8 @@ class DrivenRig:
             "novelty": float(self.governor.novelty),
             "epsilon": float(self.governor.epsilon),
             "queries": queries,
-            "interventions": self.governor.counts["interventions"],
+            "interventions": interventions,
+            "interventions_per_minute": (interventions - before) / minutes,
             "trips": self.governor.counts["trips"],
             "age_s": -1.0 if self._last_ns is None else (now_ns - self._last_ns) * 1e-9,
             "rate_hz": self._rate_hz,

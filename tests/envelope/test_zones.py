@@ -21,7 +21,7 @@ from nearhand.service.rigs import Rig, rig_from_toml
 RigWith = Callable[..., Rig]
 RATES = {"position": "velocity", "velocity": "drive"}
 #: Between 1 m and 2 m nothing may be faster than 0.4 m/s, looked at one second ahead.
-SLOW = {
+SLOW: dict[str, Any] = {
     "name": "people",
     "ahead_s": 1.0,
     "inside": [
