@@ -23,7 +23,9 @@ MOST_PATIENCE_S = 5.0
 State = Literal["waiting", "closed", "discarded", "rejected"]
 #: Answers after which the same thing may work a little later.
 PASSING = ("store", "error")
-PASSING_CODES = frozenset({"wire.crc", "unknown.episode", "refused.key", "refused.rate", "refused.storage"})
+PASSING_CODES = frozenset(
+    {"wire.crc", "unknown.episode", "refused.key", "refused.rate", "refused.storage", "refused.open_episodes"}
+)
 
 
 class Upload:

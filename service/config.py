@@ -7,6 +7,7 @@ from pathlib import Path
 
 from pydantic import ValidationError
 
+from nearhand.service.bus.limits import USUAL, Limits
 from nearhand.service.errors import ConfigError
 from nearhand.service.rigs import Frozen, sentence
 
@@ -30,6 +31,7 @@ class ServiceSettings(Frozen):
     control: str
     progress: str
     keys: Path | None = None
+    limits: Limits = USUAL
 
     @property
     def database(self) -> Path:

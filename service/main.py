@@ -15,6 +15,7 @@ from pathlib import Path
 from typing import IO
 
 from nearhand.service.bus.keys import KeyFolder
+from nearhand.service.bus.limits import USUAL, read_limits
 from nearhand.service.bus.sockets import check_address
 from nearhand.service.clock import utc_now
 from nearhand.service.config import DEFAULT_HOST, DEFAULT_PORTS, ServiceSettings
@@ -50,7 +51,12 @@ def free_ports(host: str, count: int) -> list[int]:
 
 
 def make_settings(
-    data: Path, *, host: str = DEFAULT_HOST, ports: Mapping[str, int] | None = None, pick_ports: bool = False
+    data: Path,
+    *,
+    host: str = DEFAULT_HOST,
+    ports: Mapping[str, int] | None = None,
+    pick_ports: bool = False,
+    limits: Path | None = None,
 ) -> ServiceSettings:
     """Settle where the service keeps its data and listens.
 
@@ -59,6 +65,7 @@ def make_settings(
         host: where to listen; a loopback host unless the data folder holds keys.
         ports: port by lane; the defaults where a lane is left out.
         pick_ports: take any free ports instead.
+        limits: file of limits; by default ``limits.toml`` in the data folder, if there is one.
 
     Raises:
         ConfigError: the host is not loopback and there are no keys, or the folder or its keys cannot be used.
@@ -71,6 +78,8 @@ def make_settings(
         keys.service_key(), keys.table()
     if pick_ports:
         wanted = dict(zip(DEFAULT_PORTS, free_ports(host, len(DEFAULT_PORTS)), strict=True))
+    if limits is None and (data / "limits.toml").exists():
+        limits = data / "limits.toml"
     run = data / "run"
     try:
         run.mkdir(parents=True, exist_ok=True)
@@ -85,6 +94,7 @@ def make_settings(
         control=f"ipc://{sockets / 'control.ipc'}",
         progress=f"ipc://{sockets / 'progress.ipc'}",
         keys=keys.path if keys.is_there else None,
+        limits=USUAL if limits is None else read_limits(limits),
         **{lane: f"tcp://{host}:{port}" for lane, port in wanted.items()},
     )
 

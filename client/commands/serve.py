@@ -18,6 +18,9 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     for lane, port in DEFAULT_PORTS.items():
         parser.add_argument(f"--{lane}-port", type=int, default=port, help=f"{lane} lane (default: %(default)s)")
     parser.add_argument("--pick-ports", action="store_true", help="listen on any free ports and say which")
+    parser.add_argument(
+        "--limits", type=Path, metavar="FILE", help="limits (default: DATA/limits.toml, if it is there)"
+    )
     parser.add_argument("--check", type=Path, metavar="DATA", help="check a data folder, say what to do, and stop")
     parser.add_argument("--print-schema", action="store_true", help="print the JSON Schema of every message and stop")
     parser.add_argument("--json", action="store_true", help="print the lanes' addresses as one JSON line once ready")
@@ -35,7 +38,9 @@ def run(options: argparse.Namespace) -> int:
     from nearhand.service.main import make_settings, run_service
 
     ports = {lane: getattr(options, f"{lane}_port") for lane in DEFAULT_PORTS}
-    settings = make_settings(options.data, host=options.host, ports=ports, pick_ports=options.pick_ports)
+    settings = make_settings(
+        options.data, host=options.host, ports=ports, pick_ports=options.pick_ports, limits=options.limits
+    )
 
     def on_ready(ready: ServiceSettings) -> None:
         lanes = {lane: getattr(ready, lane) for lane in DEFAULT_PORTS}

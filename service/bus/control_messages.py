@@ -89,9 +89,9 @@ class DrainReply(Message):
 
     ``occurrences``: maps {number, utc, rig, what, detail}; ``what`` is ``trip``, ``armed``, ``latched``, ``loaded``,
     ``session``, ``taken``, ``handed-back``. ``rigs``: name → {mode, version, reasons, observation, action, novelty,
-    queries, interventions, interventions_per_minute, trips, age_s, rate_hz, shadow}. ``shadows``: rig → {version, first, count, would, done,
-    driver}: rows from number ``first`` on, float32 rows and one byte each for who acted (0 fallback, 1 policy,
-    2 operator).
+    queries, interventions, interventions_per_minute, trips, age_s, rate_hz, shadow}. ``shadows``: rig → {version,
+    first, count, would, done, driver}: rows from number ``first`` on, float32 rows and one byte each for who acted
+    (0 fallback, 1 policy, 2 operator).
     """
 
     lane: ClassVar[str] = "control"

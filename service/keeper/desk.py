@@ -47,7 +47,7 @@ class Desk:
         counters["desk.requests"] += 1
         table: dict[str, Any] | None = None
         try:
-            table = decode_map(request.frame())
+            table = decode_map(request.frame(), self._lane.limits)
             self._office.access.begin("desk", request)
             message = from_map(table, DESK_REQUESTS)
             assert isinstance(message, DeskRequest)

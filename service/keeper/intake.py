@@ -14,7 +14,7 @@ from nearhand.service.bus.codec import decode_map, from_map
 from nearhand.service.bus.intake_messages import INTAKE_REQUESTS, Ack, Chunk, CloseEpisode, DiscardEpisode, OpenEpisode
 from nearhand.service.bus.message import Message
 from nearhand.service.clock import Clock
-from nearhand.service.errors import ConflictError, NearhandError, StoreError, WireError
+from nearhand.service.errors import ConflictError, NearhandError, RefusedError, StoreError, WireError
 from nearhand.service.keeper.access import Access
 from nearhand.service.keeper.credit import Credit
 from nearhand.service.keeper.lane import Lane, Request, error_reply
@@ -71,7 +71,7 @@ class Intake:
         table: dict[str, Any] | None = None
         try:
             frame = request.frame()
-            table = decode_map(frame)
+            table = decode_map(frame, self._lane.limits)
             self._access.begin("intake", request)
             message = from_map(table, INTAKE_REQUESTS)
             self._access.require("teach", "intake", message.kind)
@@ -124,6 +124,13 @@ class Intake:
             )
         row = self._ledger.store.episodes.find(message.episode)
         if row is None:
+            limits = self._lane.limits
+            if self._ledger.store.episodes.open_count() >= limits.open_episodes:
+                raise RefusedError(
+                    f"{limits.open_episodes} episodes are open already; close or discard some, or raise the limit "
+                    "open_episodes",
+                    code="refused.open_episodes",
+                )
             self._ledger.counters["intake.episodes"] += 1
             return self._ledger.store.episodes.open(
                 message.episode, rig=message.rig, rig_digest=stored.digest, operator=message.operator,
@@ -167,6 +174,13 @@ class Intake:
         if message.chunk > row.chunks:
             self._ledger.counters["intake.gaps"] += 1
             return row
+        limits = self._lane.limits
+        if self._ledger.store.database.size_bytes() >= limits.stored_bytes:
+            raise RefusedError(
+                f"the database has reached {limits.stored_bytes} bytes; raise the limit stored_bytes, or begin another "
+                "data folder",
+                code="refused.storage",
+            )
         self._ledger.counters["intake.chunks"] += 1
         self._ledger.counters["intake.samples"] += message.count
         finite = bool(np.isfinite(observations).all() and np.isfinite(actions).all())

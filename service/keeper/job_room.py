@@ -6,7 +6,7 @@ from collections.abc import Mapping
 from typing import Any
 
 from nearhand.service.bus.desk_messages import CancelJob, GetJob, JobReply, JobsReply, ListJobs, StartJob
-from nearhand.service.errors import ConfigError, ConflictError
+from nearhand.service.errors import ConfigError, ConflictError, RefusedError
 from nearhand.service.keeper.job_files import chosen_episodes
 from nearhand.service.keeper.office import Office, Room
 from nearhand.service.recipes import recipe_from_map
@@ -26,9 +26,13 @@ def start_job(office: Office, request: StartJob) -> JobReply:
     Raises:
         ConfigError: an option cannot be used.
         ConflictError: there are no demonstrations, or the version is another rig's.
+        RefusedError: too many jobs wait already.
     """
     store = office.ledger.store
     store.rigs.get(request.rig)
+    most = office.settings.limits.waiting_jobs
+    if len(store.jobs.in_state("queued", "running")) >= most:
+        raise RefusedError(f"{most} jobs wait or run already; let some end, or cancel some", code="refused.jobs")
     _check_options(request.job_kind, request.options)
     if request.job_kind == "measure":
         version = store.versions.get(int(request.options["version"]))

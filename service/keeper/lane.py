@@ -12,12 +12,17 @@ import zmq
 
 from nearhand.service.bus.admission import Admission, bearer
 from nearhand.service.bus.codec import MAX_FRAME_BYTES, encode
+from nearhand.service.bus.limits import USUAL, Limits
 from nearhand.service.bus.message import ErrorReply, Message
 from nearhand.service.bus.sockets import bind, make_socket
+from nearhand.service.clock import MonotonicClock
 from nearhand.service.errors import NearhandError, WireError
+from nearhand.service.keeper.meter import Meter
 
 #: Most replies held for a client that sends and does not read; the next ones are lost to it.
 REPLY_QUEUE = 10_000
+#: Most requests over the rate that are answered in a row before the others have their turn.
+MOST_REFUSED = 100
 _IDENTIFIER = re.compile(r"[A-Za-z0-9][A-Za-z0-9._-]{0,63}")
 
 
@@ -50,6 +55,8 @@ class Lane:
         queue: most requests held per client; a client that sends more is held back.
         admission: the door that it stands behind, where the service has keys.
         name: the lane's name, at the door.
+        limits: what is taken in.
+        replies: most replies held for a client that does not read; the next ones are lost to it.
 
     Raises:
         ConfigError: the address is taken, or not loopback while there are no keys.
@@ -63,17 +70,31 @@ class Lane:
         queue: int,
         admission: Admission | None = None,
         name: str = "",
+        limits: Limits = USUAL,
+        replies: int = REPLY_QUEUE,
     ) -> None:
+        self.limits = limits
+        self.meter = Meter(limits.requests_per_s, MonotonicClock())
         self.socket = make_socket(context, zmq.ROUTER, queue=queue, role="bind")
+        self.socket.setsockopt(zmq.MAXMSGSIZE, limits.frame_bytes)
         self._keyed = admission is not None
         if admission is not None:
             admission.guard(self.socket, name)
         # Replies to a whole batch go out at once; a router drops what is over its limit without a word.
-        self.socket.setsockopt(zmq.SNDHWM, REPLY_QUEUE)
+        self.socket.setsockopt(zmq.SNDHWM, replies)
         self.address = bind(self.socket, address)
 
     def receive(self) -> Request | None:
-        """Return the next waiting request, or None."""
+        """Return the next waiting request that is within its client's rate, or None; the others are answered here."""
+        for _ in range(MOST_REFUSED):
+            request = self._next()
+            if request is None or self.meter.admits(request.bearer.encode() or request.envelope[0]):
+                return request
+            told = f"over {self.limits.requests_per_s:g} requests per second; ask more slowly, nothing was done"
+            self.reply(request, ErrorReply(code="refused.rate", message=told))
+        return None
+
+    def _next(self) -> Request | None:
         public = ""
         try:
             if self._keyed:

@@ -29,6 +29,8 @@ from nearhand.service.store.store import Store
 #: Requests held per client: a chunk can be several megabytes, a desk request hardly ever.
 INTAKE_QUEUE = 64
 DESK_QUEUE = 100
+#: Replies held per client of the desk: some are megabytes.
+DESK_REPLIES_HELD = 16
 
 
 class Keeper:
@@ -51,8 +53,18 @@ class Keeper:
         feed = self._feed = Feed(self._context, settings.feed, door)
         ledger = self.ledger = Ledger(self.store, feed)
         self._access = Access(door, ledger)
-        self._intake_lane = Lane(self._context, settings.intake, queue=INTAKE_QUEUE, admission=door, name="intake")
-        self._desk_lane = Lane(self._context, settings.desk, queue=DESK_QUEUE, admission=door, name="desk")
+        self._intake_lane = Lane(
+            self._context, settings.intake, queue=INTAKE_QUEUE, admission=door, name="intake", limits=settings.limits
+        )
+        self._desk_lane = Lane(
+            self._context,
+            settings.desk,
+            queue=DESK_QUEUE,
+            admission=door,
+            name="desk",
+            limits=settings.limits,
+            replies=DESK_REPLIES_HELD,
+        )
         self._server = ActionServer(ledger, self._context, settings.control)
         self._queue = JobQueue(ledger, settings, self._context, self._poller)
         lanes = {"intake": self._intake_lane.address, "desk": self._desk_lane.address, "feed": feed.address}
@@ -81,6 +93,8 @@ class Keeper:
             self._queue.turn()
             self._feed.turn()
             self._access.turn()
+            refused = self._desk_lane.meter.refused + self._intake_lane.meter.refused
+            self.ledger.counters["refusals.rate"] = refused
         except StoreError as error:
             log_line(f"keeper-failed code={error.code} message={error.message!r}")
             time.sleep(0.1)

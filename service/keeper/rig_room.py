@@ -6,7 +6,7 @@ import contextlib
 
 from nearhand.service.bus.control_messages import ControlReply
 from nearhand.service.bus.desk_messages import GetRig, Halt, ListRigs, PutRig, Rearm, RigReply, RigsReply, RigStateReply
-from nearhand.service.errors import ConflictError, LinkError
+from nearhand.service.errors import ConflictError, LinkError, RefusedError
 from nearhand.service.keeper.office import Office, Room
 from nearhand.service.rigs import Rig, rig_from_toml
 from nearhand.service.store.rigs import RigRow
@@ -20,7 +20,7 @@ def put_rig(office: Office, request: PutRig) -> RigReply:
     Raises:
         ConfigError: the text does not describe a rig.
         ConflictError: other channels than the rig's episodes and versions have.
-        RefusedError: a known rig would change, and the key has not the role ``release``.
+        RefusedError: a known rig would change, and the key has not the role ``release``; or there are too many.
     """
     rig = rig_from_toml(request.toml)
     rigs = office.ledger.store.rigs
@@ -37,6 +37,9 @@ def put_rig(office: Office, request: PutRig) -> RigReply:
         )
     if known is not None:
         office.access.require("release", "desk", "changing a rig that is known")
+    most = office.settings.limits.rigs
+    if known is None and len(rigs.names()) >= most:
+        raise RefusedError(f"{most} rigs are known already; raise the limit rigs", code="refused.rigs")
     candidate = RigRow(rig=rig, digest=rig.digest(), toml=request.toml, put_utc="")
     loaded = False
     if office.server.reachable:

@@ -110,6 +110,10 @@ class Database:
         except sqlite3.Error as error:
             raise store_error(error, str(path)) from error
 
+    def size_bytes(self) -> int:
+        """Return the size of the database, without its write-ahead log."""
+        return int(self.value("PRAGMA page_count")) * int(self.value("PRAGMA page_size"))
+
     @property
     def in_transaction(self) -> bool:
         """Whether an ``atomic`` block is open."""

@@ -107,6 +107,10 @@ class Episodes:
         )
         return self.get(episode)
 
+    def open_count(self) -> int:
+        """Return how many episodes are open."""
+        return int(self._database.value("SELECT count(*) FROM episodes WHERE state = 'open'"))
+
     def append(self, row: EpisodeRow, chunk: ChunkRow, *, finite: bool) -> EpisodeRow:
         """Store the next chunk of an open episode; its number is the count of those before it."""
         with self._database.atomic():

@@ -13,7 +13,8 @@ import msgpack
 import pytest
 
 from nearhand.service.bus.action_messages import ACTION_REQUESTS, Act
-from nearhand.service.bus.codec import MAX_FRAME_BYTES, MAX_ITEMS, decode, decode_map, encode
+from nearhand.service.bus.codec import MAX_FRAME_BYTES, decode, decode_map, encode
+from nearhand.service.bus.limits import USUAL
 from nearhand.service.errors import WireError
 
 FORMAT_TABLE: list[tuple[Any, str]] = [
@@ -151,8 +152,8 @@ def test_limits_of_size_hold() -> None:
         decode_map(bytes(MAX_FRAME_BYTES + 1))
     assert caught.value.code == "wire.oversized"
     with pytest.raises(WireError):
-        decode_map(msgpack.packb({"x": [0] * (MAX_ITEMS + 1)}))
-    assert len(decode_map(msgpack.packb({"x": [0] * MAX_ITEMS}))["x"]) == MAX_ITEMS
+        decode_map(msgpack.packb({"x": [0] * (USUAL.items + 1)}))
+    assert len(decode_map(msgpack.packb({"x": [0] * USUAL.items}))["x"]) == USUAL.items
 
 
 def test_a_message_written_by_hand_from_the_wire_page_is_read() -> None:
@@ -164,4 +165,4 @@ def test_a_message_written_by_hand_from_the_wire_page_is_read() -> None:
         frame += bytes([0xA0 + len(name)]) + name.encode() + bytes.fromhex(hexadecimal)
     message = decode(frame, ACTION_REQUESTS)
     assert message == Act(rig="crane", session="s", seq=7, sent_ns=1000, obs=b"\x00\x00\x80\x3f\x00\x00\x00\xc0")
-    assert encode(message).startswith(bytes.fromhex("88a17601a46b696e64a3616374"))
+    assert encode(message).startswith(bytes.fromhex("89a17601a46b696e64a3616374"))
