@@ -13,7 +13,7 @@ import subprocess
 import sys
 import tempfile
 import time
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from itertools import islice
 from pathlib import Path
@@ -62,12 +62,12 @@ Socket = zmq.Socket[bytes]
 Times = dict[str, list[int]]
 
 
-def bench_rig() -> Rig:
+def bench_rig(name: str = "bench") -> Rig:
     """Return the rig that is measured: 24 observations, 6 actions, two braking axes."""
     axes = [("o0", "o1", "a0", "acceleration"), ("o2", "o3", "a1", "velocity")]
     return Rig.model_validate(
         {
-            "name": "bench",
+            "name": name,
             "title": "24 observations, 6 actions",
             "observations": [{"name": f"o{k}", "unit": "", "low": -5.0, "high": 5.0} for k in range(OBSERVATIONS)],
             "actions": [
@@ -129,7 +129,8 @@ def _process(words: list[str], **options: Any) -> Iterator[subprocess.Popen[str]
 
 
 @contextmanager
-def _echo() -> Iterator[str]:
+def echo_server() -> Iterator[str]:
+    """Run the echo; yield its address."""
     with _process(["-c", ECHO], stdout=subprocess.PIPE) as process:
         assert process.stdout is not None
         address = process.stdout.readline().strip()
@@ -139,8 +140,10 @@ def _echo() -> Iterator[str]:
 
 
 @contextmanager
-def action_server(context: zmq.Context[Socket], folder: Path, rig: Rig, *, keys: Path | None = None) -> Iterator[str]:
-    """Run an action server with the rig's policy loaded and armed; yield its address.
+def action_server(
+    context: zmq.Context[Socket], folder: Path, names: Sequence[str], *, keys: Path | None = None
+) -> Iterator[str]:
+    """Run an action server with a policy loaded and armed for rigs of these names; yield its address.
 
     Args:
         keys: folder of the service's keys, where it shall have some.
@@ -166,12 +169,14 @@ def action_server(context: zmq.Context[Socket], folder: Path, rig: Rig, *, keys:
             raise LinkError("the action server did not start; its log above says why")
         from nearhand.service.policy.format import sha256
 
-        data = bench_policy(rig)
-        description = rig.model_dump(mode="json")
-        requests: tuple[Message, ...] = (
-            Load(request="1", rig=rig.name, description=description, version=1, sha256=sha256(data), policy=data),
-            Arm(request="2", rig=rig.name, who="bench", why="measuring"),
-        )
+        requests: list[Message] = []
+        for name in names:
+            rig = bench_rig(name)
+            data, description = bench_policy(rig), rig.model_dump(mode="json")
+            requests += [
+                Load(request="1", rig=name, description=description, version=1, sha256=sha256(data), policy=data),
+                Arm(request="2", rig=name, who="bench", why="measuring"),
+            ]
         control = make_socket(context, zmq.DEALER, queue=BULK_QUEUE, role="connect")
         try:
             connect(control, settings.control)
@@ -229,8 +234,8 @@ def run(seconds: float = 60.0) -> dict[str, Any]:
     try:
         with (
             tempfile.TemporaryDirectory(prefix="nearhand-") as folder,
-            _echo() as echo_address,
-            action_server(context, Path(folder), rig) as action_address,
+            echo_server() as echo_address,
+            action_server(context, Path(folder), [rig.name]) as action_address,
         ):
             sockets = {"action": make_client(context, action_address), "echo": make_client(context, echo_address)}
             welcome_session(rig, sockets["action"])

@@ -55,8 +55,8 @@ def run(count: int = 4_000) -> dict[str, Any]:
             keys = KeyFolder(folders["keyed"] / "keys")
             key = keys.new("bench", ["drive"], folders["keyed"] / "bench.key")
             with (
-                action_server(context, folders["plain"], rig) as plain,
-                action_server(context, folders["keyed"], rig, keys=keys.path) as keyed,
+                action_server(context, folders["plain"], [rig.name]) as plain,
+                action_server(context, folders["keyed"], [rig.name], keys=keys.path) as keyed,
             ):
                 sockets = {"plain": make_client(context, plain), "keyed": make_client(context, keyed, key)}
                 queries = make_queries(rig, WARM_UP + count)

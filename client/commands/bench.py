@@ -13,6 +13,7 @@ from nearhand.service.errors import ConfigError
 BENCHES = {
     "action-latency": "nearhand.client.bench_action",
     "curve-cost": "nearhand.client.bench_curve",
+    "many-rigs": "nearhand.client.bench_rigs",
     "faults": "nearhand.client.faults.campaign",
     "novelty": "nearhand.client.bench_novelty",
 }
