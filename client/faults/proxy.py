@@ -54,7 +54,7 @@ class Proxy:
         self._rig = b""
         self._waiting: list[tuple[float, int, bool, bytes]] = []
         self._order = count()
-        self._stopping = threading.Event()
+        self._stopping, self._cutting = threading.Event(), threading.Event()
         self._thread = threading.Thread(target=self._run, name="proxy", daemon=True)
 
     def __enter__(self) -> Self:
@@ -68,11 +68,18 @@ class Proxy:
         self._back.close(linger=0)
         self._context.term()
 
+    def cut(self) -> None:
+        """Close the rig's side for good: the connection is refused from then on."""
+        self._cutting.set()
+
     def _run(self) -> None:
         poller = zmq.Poller()
         poller.register(self._front, zmq.POLLIN)
         poller.register(self._back, zmq.POLLIN)
         while not self._stopping.is_set():
+            if self._cutting.is_set():
+                self._front.close(linger=0)
+                return
             for socket, _ in poller.poll(POLL_MS):
                 parts = socket.recv_multipart()
                 upward = socket is self._front

@@ -186,6 +186,12 @@ class Server:
         self.process.wait(PATIENCE_S)
 
     def do(self, message: Message) -> ControlReply:
+        """Send a control request that changes something and return its reply."""
+        reply = self.ask(message)
+        assert isinstance(reply, ControlReply), reply
+        return reply
+
+    def ask(self, message: Message) -> Message:
         """Send a control request and return its reply."""
         control = make_socket(self._context, zmq.DEALER, queue=BULK_QUEUE, role="connect")
         try:
@@ -195,7 +201,6 @@ class Server:
             reply = decode(control.recv(), CONTROL_REPLIES)
         finally:
             control.close(linger=0)
-        assert isinstance(reply, ControlReply), reply
         return reply
 
     def load(self, data: bytes, version: int = 1) -> ControlReply:
