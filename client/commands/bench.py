@@ -14,6 +14,7 @@ BENCHES = {
     "action-latency": "nearhand.client.bench_action",
     "curve-cost": "nearhand.client.bench_curve",
     "many-rigs": "nearhand.client.bench_rigs",
+    "endurance": "nearhand.client.faults.endurance",
     "faults": "nearhand.client.faults.campaign",
     "novelty": "nearhand.client.bench_novelty",
 }

@@ -9,6 +9,7 @@ import signal
 import subprocess
 import sys
 import time
+from collections.abc import Mapping
 from pathlib import Path
 
 from nearhand.service.errors import LinkError
@@ -23,31 +24,21 @@ class ServiceProcess:
     Args:
         data: the data folder.
         options: further options of ``nearhand serve``.
+        ports: port by lane; any free ones when left out.
 
     Attributes:
         lanes: address by lane.
         log: file with the service's log lines.
     """
 
-    def __init__(self, data: Path, *options: str) -> None:
+    def __init__(self, data: Path, *options: str, ports: Mapping[str, int] | None = None) -> None:
         data.mkdir(parents=True, exist_ok=True)
         self.log = data / "service.log"
         self._stream = self.log.open("ab")
+        where = [f"--{lane}-port={port}" for lane, port in ports.items()] if ports else ["--pick-ports"]
+        words = [sys.executable, "-m", "nearhand.client.command", "serve", "--data", str(data), *where, "--json"]
         self._process = subprocess.Popen(
-            [
-                sys.executable,
-                "-m",
-                "nearhand.client.command",
-                "serve",
-                "--data",
-                str(data),
-                "--pick-ports",
-                "--json",
-                *options,
-            ],
-            stdin=subprocess.DEVNULL,
-            stdout=subprocess.PIPE,
-            stderr=self._stream,
+            [*words, *options], stdin=subprocess.DEVNULL, stdout=subprocess.PIPE, stderr=self._stream
         )
         self.lanes = self._await_lanes()
 
@@ -108,6 +99,12 @@ class ServiceProcess:
                 pass
             time.sleep(0.02)
         raise LinkError(f"{module} was not restarted within {timeout_s:g} s")
+
+    def kill_whole(self) -> None:
+        """Kill the supervisor, as nothing can be handled; its children end by themselves."""
+        self._process.kill()
+        self._process.wait()
+        self.stop()
 
     def stop(self) -> None:
         """End the service and wait for it."""
