@@ -138,6 +138,26 @@ class Novelty(Frozen):
         return self
 
 
+class Health(Frozen):
+    """When a version in service is stood down by itself: looked at over the latest ``window_s``.
+
+    Attributes:
+        interventions_per_minute: of driven time, at most.
+        trips: at most so many.
+        latency_s, slow_share: at most this share of observations may be under way so much longer than usual.
+        least_s: rates are judged only after so much driving.
+        then: what acts instead, the version that was in service before (if there is one), or rest.
+    """
+
+    interventions_per_minute: Annotated[FiniteFloat, Field(ge=0)] | None = None
+    trips: Annotated[int, Field(ge=0)] | None = None
+    latency_s: Positive | None = None
+    slow_share: Annotated[FiniteFloat, Field(ge=0, le=1)] = 0.01
+    window_s: Annotated[FiniteFloat, Field(gt=0, le=3600)] = 60.0
+    least_s: Positive = 10.0
+    then: Literal["previous", "rest"] = "previous"
+
+
 class Plant(Frozen):
     """A simulator or an expert, by entry-point name, with its options."""
 
@@ -184,6 +204,7 @@ class Rig(Frozen):
     rates: dict[Name, str] = Field(default_factory=dict)
     novelty: Novelty = Novelty()
     history: History = History()
+    health: Health | None = None
     simulator: Plant | None = None
     experts: dict[Name, Plant] = Field(default_factory=dict)
     expert: Name | None = None

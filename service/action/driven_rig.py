@@ -146,6 +146,7 @@ class DrivenRig:
             "interventions": interventions,
             "interventions_per_minute": (interventions - before) / minutes,
             "trips": self.governor.counts["trips"],
+            "slow": self.governor.counts["slow"],
             "age_s": -1.0 if self._last_ns is None else (now_ns - self._last_ns) * 1e-9,
             "rate_hz": self._rate_hz,
             "shadow": 0 if self.shadow is None else self.shadow.version,

@@ -81,6 +81,8 @@ class Governor:
         self._limits = Limits.of(rig)
         self._n, self._m = len(rig.observations), len(rig.actions)
         self._watchdog = Watchdog(rig.timing.deadline_s)
+        latency_s = None if rig.health is None else rig.health.latency_s
+        self._slow_ns = math.inf if latency_s is None else latency_s * 1e9
         self._guards = Guards(self._limits)
         self._fallback = FallbackAction(self._limits)
         self._barely_low = self._limits.low - self._limits.rounding
@@ -228,6 +230,8 @@ class Governor:
         wrong = 0
         if self._watchdog.received(sent_ns, now_ns):
             wrong |= LATE
+        if self._watchdog.excess_ns > self._slow_ns:
+            self.counts["slow"] += 1
         if by_operator is not self._taken:
             self._change_driver(by_operator)
         if applied is not None:

@@ -15,12 +15,16 @@ class Watchdog:
 
     Args:
         deadline_s: longest gap and longest excess.
+
+    Attributes:
+        excess_ns: of the last query.
     """
 
     def __init__(self, deadline_s: float) -> None:
         self._deadline_ns = round(deadline_s * 1e9)
         self._received_ns: int | None = None
         self._smallest_ns: float | None = None
+        self.excess_ns = 0.0
 
     def forget(self) -> None:
         """A new session: other clock, no gap."""
@@ -48,4 +52,5 @@ class Watchdog:
             self._smallest_ns += REBASE * (now_ns - self._received_ns)
         self._smallest_ns = min(self._smallest_ns, transit_ns)
         self._received_ns = now_ns
-        return transit_ns - self._smallest_ns > self._deadline_ns
+        self.excess_ns = transit_ns - self._smallest_ns
+        return self.excess_ns > self._deadline_ns

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 from nearhand.service.bus.admission import Admission
 from nearhand.service.errors import RefusedError
 from nearhand.service.keeper.lane import Request
-from nearhand.service.keeper.ledger import Ledger
+from nearhand.service.keeper.ledger import Ledger, log_line
 
 #: A refusal is recorded at once, and its repetitions together, at most once in so many seconds.
 REPEAT_S = 10.0
@@ -37,6 +37,7 @@ class Access:
         self._public = ""
         self._refused: dict[tuple[str, str, str], _Refusal] = {}
         self._turned_away = 0
+        self._trouble = ""
 
     @property
     def is_keyed(self) -> bool:
@@ -85,6 +86,9 @@ class Access:
         """
         if self._admission is None:
             return
+        if self._admission.trouble != self._trouble:
+            self._trouble = self._admission.trouble
+            log_line(f"keys {'unusable' if self._trouble else 'usable'} message={self._trouble!r}")
         turned_away = self._admission.counters["turned_away"]
         if turned_away > self._turned_away:
             self._ledger.counters["refusals.at_the_door"] += turned_away - self._turned_away

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import argparse
+import contextlib
 import os
 import time
 from collections.abc import Sequence
@@ -18,6 +19,7 @@ from nearhand.service.errors import NearhandError, StoreError
 from nearhand.service.keeper.access import Access
 from nearhand.service.keeper.action_server import ActionServer
 from nearhand.service.keeper.desk import Desk
+from nearhand.service.keeper.health import HealthWatch
 from nearhand.service.keeper.intake import Intake
 from nearhand.service.keeper.job_queue import JobQueue
 from nearhand.service.keeper.lane import Lane
@@ -29,6 +31,8 @@ from nearhand.service.store.store import Store
 #: Requests held per client: a chunk can be several megabytes, a desk request hardly ever.
 INTAKE_QUEUE = 64
 DESK_QUEUE = 100
+#: Longest time that the end spends on what has arrived already.
+LEAVE_S = 1.0
 #: Replies held per client of the desk: some are megabytes.
 DESK_REPLIES_HELD = 16
 
@@ -72,17 +76,22 @@ class Keeper:
         office = Office(ledger, self._server, self._queue, in_force, time.monotonic(), self._access)
         self._intake = Intake(ledger, self._intake_lane, MonotonicClock(), self._access)
         self._desk = Desk(office, self._desk_lane)
+        self._health = HealthWatch(office)
         for socket in (self._intake_lane.socket, self._desk_lane.socket, self._server.socket, self._queue.socket):
             self._poller.register(socket, zmq.POLLIN)
 
     def run(self, stop: StopSignal) -> None:
-        """Serve until the stop signal."""
+        """Serve until the stop signal; then take in, and acknowledge, what has arrived already."""
         self._poller.register(stop.fileno(), zmq.POLLIN)
         busy = False
         while not stop.stopped:
             pause_s = 0.0 if busy else min(self._server.pause_s(), self._queue.pause_s())
             self._poller.poll(round(1000 * pause_s + 0.5))
             busy = self.turn()
+        end_s = time.monotonic() + LEAVE_S
+        with contextlib.suppress(StoreError):
+            while self._desk.serve() + self._intake.serve() and time.monotonic() < end_s:
+                pass
 
     def turn(self) -> bool:
         """Do what is due; return whether more may be waiting."""
@@ -90,6 +99,7 @@ class Keeper:
             served = self._desk.serve() + self._intake.serve()
             self._access.end()
             self._server.turn()
+            self._health.turn()
             self._queue.turn()
             self._feed.turn()
             self._access.turn()

@@ -24,8 +24,9 @@ class RigRow:
 
 
 def machine_digest(rig: Rig) -> str:
-    """Return the SHA-256 of what a measurement depends on: the description without its title and its gate."""
-    description = {key: value for key, value in rig.model_dump(mode="json").items() if key not in ("title", "gate")}
+    """Return the SHA-256 of what a measurement depends on: the description without its title, gate and health rules."""
+    aside = ("title", "gate", "health")
+    description = {key: value for key, value in rig.model_dump(mode="json").items() if key not in aside}
     return hashlib.sha256(canonical(description).encode()).hexdigest()
 
 
