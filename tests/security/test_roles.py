@@ -209,6 +209,7 @@ def test_a_revoked_key_is_out_of_every_lane_within_a_second(
         assert [delivery.state for delivery in stream.deliveries().values()] == ["waiting"], "the spool keeps it"
         while (left_s := end_s - time.monotonic()) > 0 or her_feed.receive(0.0) is not None:
             her_feed.receive(max(0.0, left_s))
+        stream.close(timeout_s=0.0)
         wait_for(lambda: deed_is_heard(desk, feed), "the feed of a key in force")
         assert her_feed.receive(0.3) is None
 
