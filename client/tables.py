@@ -66,6 +66,38 @@ def distance_table(measurement: Mapping[str, Any], title: str) -> RenderableType
     return table
 
 
+def paired_table(against: Mapping[str, Any], title: str) -> RenderableType:
+    """Return the differences between two versions, paired by start state."""
+    from rich import box
+    from rich.table import Table
+    from rich.text import Text
+
+    table = Table(box=box.SIMPLE_HEAD, pad_edge=False, padding=(0, 1, 0, 0), title=title, title_justify="left")
+    table.caption, table.caption_justify = "p: sign-flip test of no difference", "left"
+    for name in ("figure", "difference", "won", "drawn", "lost", "p"):
+        table.add_column(name, justify="left" if name == "figure" else "right")
+    for name, row in against.get("figures", {}).items():
+        words = name.removeprefix("closed_loop.").replace("_", " ")
+        counts = (str(row[key]) for key in ("wins", "draws", "losses"))
+        table.add_row(Text(words), Text(with_interval(row)), *counts, number(row["p_same"]))
+    return table
+
+
+def plan_table(bounds: Iterable[Mapping[str, Any]], title: str) -> RenderableType:
+    """Return how many episodes each bound of the gate needs."""
+    from rich import box
+    from rich.table import Table
+    from rich.text import Text
+
+    table = Table(box=box.SIMPLE_HEAD, pad_edge=False, padding=(0, 1, 0, 0), title=title, title_justify="left")
+    for name in ("figure", "bound", "value", "now", "needed"):
+        table.add_column(name, justify="left" if name in ("figure", "bound") else "right")
+    for row in bounds:
+        needed = "never" if row["needed"] is None else str(row["needed"])
+        table.add_row(Text(row["figure"]), row["bound"], number(row["value"]), str(row["now"]), needed)
+    return table
+
+
 def _counts(figures: Iterable[Mapping[str, Any]]) -> str:
     """Return over how many episodes the figures were taken: ``n = 12`` or ``n = 12–50``."""
     counts = sorted({int(figure["n"]) for figure in figures if figure.get("n") is not None})

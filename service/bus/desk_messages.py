@@ -103,8 +103,8 @@ class StartJob(Deed):
     """Queue a job.
 
     ``options`` by job kind. ``distil``: recipe (a map, see recipes), operators (list, empty for all), episodes (how
-    many training episodes at most, 0 for all). ``measure``: version, episodes (closed loop), seed, operators.
-    ``inspect``: none.
+    many training episodes at most, 0 for all). ``measure``: version, closed_loop_episodes, seed, operators, against
+    (a version, 0 for none). ``inspect``: none.
     """
 
     role: ClassVar[str] = "teach"
@@ -184,6 +184,21 @@ class VersionReply(DeskReply):
     measurement: Table | None = None
     refusal: Text = ""
     policy: bytes | None = None
+
+
+class GetPlan(DeskRequest):
+    """Ask how many episodes a version's measurement needs to pass its rig's gate, judged by its last measurement."""
+
+    kind: str = "get-plan"
+    version: Count
+
+
+class PlanReply(DeskReply):
+    """Per bound: figure, bound, value, limit, now, needed (null where no number is enough), met, sentence."""
+
+    kind: str = "plan-reply"
+    version: Count
+    bounds: tuple[Table, ...]
 
 
 class Release(Deed):
@@ -299,10 +314,10 @@ class HealthReply(DeskReply):
 DESK_REQUESTS = kinds(
     Where, PutRig, GetRig, ListRigs, ListEpisodes, GetEpisode, StartJob, GetJob, CancelJob, ListJobs, ListVersions,
     GetVersion, Release, Rollback, StandDown, Rearm, Halt, ListEvents, VerifyEvents, GetHealth,
-    StartShadow, StopShadow, GetShadow,
+    StartShadow, StopShadow, GetShadow, GetPlan,
 )  # fmt: skip
 DESK_REPLIES = kinds(
     WhereReply, RigReply, RigsReply, EpisodesReply, EpisodeReply, JobReply, JobsReply, VersionsReply, VersionReply,
-    ReleaseReply, RigStateReply, EventsReply, VerifyReply, HealthReply, ShadowReply,
+    ReleaseReply, RigStateReply, EventsReply, VerifyReply, HealthReply, ShadowReply, PlanReply,
     ErrorReply,
 )  # fmt: skip

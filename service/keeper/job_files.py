@@ -112,9 +112,19 @@ def _write_inputs(store: Store, job: JobRow, folder: JobFolder) -> dict[str, Any
         folder.write_bytes("input-clone.policy", store.versions.policy(clone))
     if in_service:
         folder.write_bytes("input-in-service.policy", store.versions.policy(in_service))
+    against = int(job.options.get("against") or 0)
+    if against:
+        other = store.versions.get(against)
+        if other.rig != job.rig:
+            raise ConflictError(
+                f"version {against} is for {other.rig}, version {version.version} for {job.rig}; compare within a rig",
+                code="conflict.rig",
+            )
+        folder.write_bytes("input-against.policy", store.versions.policy(against))
     return {
         "clone": clone,
         "in_service": in_service,
+        "against": against,
         "closed_loop_episodes": job.options.get("closed_loop_episodes", 50),
         "seed": job.options.get("seed", 1),
     }

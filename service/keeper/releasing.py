@@ -73,8 +73,17 @@ def judge_version(office: Office, rig: RigRow, measurement: MeasurementRow, pres
     if reference is not None and reference.machine_digest != measurement.machine_digest:
         reference = None
     in_service = reference.content if reference else None
-    bounds += [plain(bound) for bound in judge(rig.rig.gate, measurement.content, in_service)]
-    return bounds
+    verdicts = [plain(bound) for bound in judge(rig.rig.gate, measurement.content, in_service)]
+    # Whoever measures again and again until the gate opens would fool it: what an earlier measurement of the version
+    # broke stays broken. Further looks can only close the gate, so its level holds for any number of them.
+    for earlier in office.ledger.store.versions.measurements(measurement.version):
+        if earlier.measurement == measurement.measurement or earlier.machine_digest != measurement.machine_digest:
+            continue
+        for index, bound in enumerate(judge(rig.rig.gate, earlier.content, in_service)):
+            if verdicts[index]["met"] and not bound["met"]:
+                told = f"measurement {earlier.measurement}, {earlier.utc}: {bound['sentence']}"
+                verdicts[index] = plain({**bound, "sentence": told})
+    return bounds + verdicts
 
 
 def roll_back(office: Office, request: Rollback) -> ReleaseReply:

@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 from nearhand.service.bus.desk_messages import (
+    GetPlan,
     GetVersion,
     ListVersions,
+    PlanReply,
     Release,
     ReleaseReply,
     Rollback,
@@ -12,8 +14,10 @@ from nearhand.service.bus.desk_messages import (
     VersionReply,
     VersionsReply,
 )
+from nearhand.service.errors import ConflictError
 from nearhand.service.keeper.office import Office, Room
 from nearhand.service.keeper.releasing import release_version, roll_back, stand_down
+from nearhand.service.store.canonical import plain
 
 
 def list_versions(office: Office, request: ListVersions) -> VersionsReply:
@@ -47,6 +51,29 @@ def get_version(office: Office, request: GetVersion) -> VersionReply:
     )
 
 
+def get_plan(office: Office, request: GetPlan) -> PlanReply:
+    """Tell how many episodes the gate needs.
+
+    Raises:
+        ConflictError: the version was never measured, or its rig has no gate.
+    """
+    from nearhand.service.measure.planning import plan
+
+    store = office.ledger.store
+    version = store.versions.get(request.version)
+    measurement = store.versions.measurement(version.version)
+    gate = store.rigs.get(version.rig).rig.gate
+    if measurement is None or not gate:
+        what = (
+            "was never measured; measure it once, with any number of episodes" if gate else "has a rig without a gate"
+        )
+        raise ConflictError(f"version {version.version} {what}", code="conflict.not_measured")
+    present = store.versions.in_service(version.rig)
+    reference = store.versions.measurement(present) if present else None
+    rows = plan(gate, measurement.content, reference.content if reference else None)
+    return PlanReply(request=request.request, version=version.version, bounds=tuple(plain(row) for row in rows))
+
+
 def release(office: Office, request: Release) -> ReleaseReply:
     """Release a version through the gate."""
     return release_version(office, request)
@@ -65,6 +92,7 @@ def take_down(office: Office, request: StandDown) -> ReleaseReply:
 ROOM: Room = {
     "list-versions": list_versions,
     "get-version": get_version,
+    "get-plan": get_plan,
     "release": release,
     "rollback": rollback,
     "stand-down": take_down,

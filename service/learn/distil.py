@@ -33,6 +33,7 @@ from nearhand.service.learn.layers import Layers
 from nearhand.service.learn.offline import fit_offline
 from nearhand.service.learn.online import OnlineProximalPoint, Scene
 from nearhand.service.learn.progress import restore_progress, save_progress
+from nearhand.service.learn.recovered_cost import RecoveredCost
 from nearhand.service.learn.rollouts import InProcess, OneSimulator, RigSimulator, roll_out, served
 from nearhand.service.learn.selection import Selector
 from nearhand.service.learn.starts import Wanted
@@ -80,6 +81,7 @@ class Improved:
     curves: dict[str, list[float]]
     messages: list[str]
     steps: int
+    cost: RecoveredCost | None = None
 
 
 def read_lesson(folder: JobFolder) -> Lesson:
@@ -163,7 +165,9 @@ def run_distil(
         )
         folder.write_bytes(f"output-{name}.policy", write_policy(file))
         wall_s = round(time.monotonic() - began_s, 3)
-        own = {"method": method, "wall_s": wall_s, "confidence_gate": calibrated_on}
+        own: dict[str, Any] = {"method": method, "wall_s": wall_s, "confidence_gate": calibrated_on}
+        if name != "clone" and improved is not None and improved.cost is not None:
+            own["recovered_cost"] = improved.cost.to_map()
         versions.append({"name": name, "method": method, "provenance": {**provenance, **own}})
         reporter.report("calibrating", (number + 1) / len(files))
     curves = {
@@ -330,8 +334,20 @@ def _online(
     progress = run.progress
     return Improved(
         candidates[choice.name], "proximal-online", chosen, progress.curves, progress.messages,
-        progress.steps + choice.steps,
+        progress.steps + choice.steps, recovered(scene, run),
     )  # fmt: skip
+
+
+def recovered(scene: Scene, run: OnlineProximalPoint) -> RecoveredCost:
+    """Return a run's cost: the mean of the cost weights over its iterations."""
+    return RecoveredCost(
+        rig=scene.rig.name,
+        observations=tuple(channel.name for channel in scene.rig.observations),
+        actions=tuple(channel.name for channel in scene.rig.actions),
+        features=scene.features,
+        weights=run.progress.cost_sum / max(run.progress.iteration, 1),
+        discount=scene.discount,
+    )
 
 
 def calibrated(lesson: Lesson, policy: Policy, stopped: Stopped) -> tuple[dict[str, Any], str]:

@@ -90,6 +90,8 @@ class Progress:
     lost: int = 0
     caution: float = 1.0
     steps: int = 0
+    #: Sum over the iterations of the cost weights (k + 1,); their mean is the recovered cost.
+    cost_sum: Float64 = field(default_factory=lambda: np.zeros(0))
     curves: dict[str, list[float]] = field(default_factory=dict)
     candidates: dict[str, tuple[Float32, Float32]] = field(default_factory=dict)
     messages: list[str] = field(default_factory=list)
@@ -130,6 +132,7 @@ class OnlineProximalPoint:
             critic=Adam(self._critic.draw(generator)),
             cost=Adam(torch.zeros(size)),
             absorbing=Adam(torch.zeros(1)),
+            cost_sum=np.zeros(size),
             average=clone.flat.clone(),
             best=clone.flat.clone(),
             best_log_sd=clone.log_sd,
@@ -247,6 +250,7 @@ class OnlineProximalPoint:
         rollouts = matched(scene, rollouts)
         means = mean_features(scene.features, rollouts, scene.discount)
         figures, evaluated = self._evaluate(rollouts, reference)
+        state.cost_sum = state.cost_sum + state.cost.values.detach().numpy()
         distance = float(np.linalg.norm(means - evaluated.expert))
         message = self._keep_or_return(distance, reference)
         if not message:

@@ -18,7 +18,7 @@ def save_progress(folder: JobFolder, run: OnlineProximalPoint, identity: str) ->
     """Write the run's checkpoint."""
     state = run.progress
     arrays: dict[str, object] = {"log_sd": state.log_sd, "best_log_sd": state.best_log_sd}
-    arrays |= {"average": state.average.numpy(), "best": state.best.numpy()}
+    arrays |= {"average": state.average.numpy(), "best": state.best.numpy(), "cost_sum": state.cost_sum}
     steps = {}
     for name in OPTIMISERS:
         optimiser = getattr(state, name)
@@ -49,6 +49,7 @@ def restore_progress(folder: JobFolder, run: OnlineProximalPoint, identity: str)
     state.log_sd = np.asarray(arrays["log_sd"], dtype=np.float32)
     state.best_log_sd = np.asarray(arrays["best_log_sd"], dtype=np.float32)
     state.average, state.best = torch.from_numpy(arrays["average"]), torch.from_numpy(arrays["best"])
+    state.cost_sum = np.asarray(arrays["cost_sum"], dtype=np.float64)
     state.candidates = {
         name: (arrays[f"candidate.{name}.flat"], arrays[f"candidate.{name}.log_sd"]) for name in facts["candidates"]
     }

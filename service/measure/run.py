@@ -23,6 +23,7 @@ from nearhand.service.measure.figures import (
     sample_figures,
 )
 from nearhand.service.measure.intervals import Interval, bootstrap
+from nearhand.service.measure.paired import compare, truncation_bound
 from nearhand.service.measure.traces import side_by_side
 from nearhand.service.policy.format import PolicyFile, read_policy
 from nearhand.service.rigs import Rig
@@ -73,7 +74,7 @@ def run_measure(folder: JobFolder, reporter: Reporter, stopped: Stopped) -> dict
     )  # fmt: skip
     files = {
         name: read_policy(folder.read_bytes(f"input-{name}.policy"))
-        for name in ("version", "clone", "in-service")
+        for name in ("version", "clone", "in-service", "against")
         if folder.has(f"input-{name}.policy")
     }
     tell = _Teller(reporter, stopped, stages=2 + 2 * len(files))
@@ -86,6 +87,9 @@ def run_measure(folder: JobFolder, reporter: Reporter, stopped: Stopped) -> dict
                 figures[name]["clone"] = {key: value for key, value in beside.items() if key not in ("floor", "clone")}
     if "in-service" in measured:
         figures.update(_against(served, measured["in-service"][1], bench))
+    against: dict[str, Any] = {}
+    if "against" in measured:
+        against = _side_by_side(served, measured["against"][1], bench, measured["against"][0])
     figures["truncation_mass"] = figure(
         Interval(float(bench.features.discount**longest), np.nan, np.nan, len(demonstrations)), "", "low"
     )
@@ -100,6 +104,8 @@ def run_measure(folder: JobFolder, reporter: Reporter, stopped: Stopped) -> dict
             "figures": figures,
             "traces": side_by_side(rig, bench.expert, bare),
             "notes": notes,
+            "against": {"version": options.get("against"), "figures": against} if against else None,
+            "truncation_bound": truncation_bound(float(bench.features.discount**longest), figures),
             "settings": {
                 "closed_loop_episodes": bench.episodes, "seed": bench.seed, "held_out_episodes": len(held_out),
                 "demonstrations": len(demonstrations), "discount": bench.features.discount,
@@ -172,6 +178,21 @@ def _measure(
 
 def _expert_features(features: FeatureMap, episodes: Sequence[Episode]) -> np.ndarray[Any, np.dtype[np.float64]]:
     return np.array([features.episode(item.observations, item.actions) for item in episodes])
+
+
+def _side_by_side(
+    served: Rollouts | None, other: Rollouts | None, bench: Bench, others: dict[str, Figure]
+) -> dict[str, Any]:
+    """Return the differences to another version, paired by start state, with the other's own value beside."""
+    if served is None or other is None:
+        return {}
+    span = None
+    if bench.expert is not None and bench.chance is not None:
+        span = float(bench.expert.score.mean() - bench.chance.score.mean())
+    rows = compare(served, other, span)
+    for name, row in rows.items():
+        row["other"] = others.get(name, {}).get("value")
+    return rows
 
 
 def _against(served: Rollouts | None, other: Rollouts | None, bench: Bench) -> dict[str, Figure]:

@@ -151,11 +151,17 @@ class Versions:
 
     def measurement(self, version: int) -> MeasurementRow | None:
         """Return a version's latest measurement, or None."""
-        row = self._database.row(
-            "SELECT * FROM measurements WHERE version = ? ORDER BY measurement DESC LIMIT 1", (version,)
+        rows = self.measurements(version, most=1)
+        return rows[0] if rows else None
+
+    def measurements(self, version: int, *, most: int = -1) -> list[MeasurementRow]:
+        """Return a version's measurements, latest first; at most so many if given."""
+        rows = self._database.rows(
+            "SELECT * FROM measurements WHERE version = ? ORDER BY measurement DESC LIMIT ?", (version, most)
         )
-        if row is None:
-            return None
-        values = {name: row[name] for name in MeasurementRow.__slots__}
-        values["content"] = json.loads(values["content"])
-        return MeasurementRow(**values)
+        return [
+            MeasurementRow(**{
+                name: json.loads(row[name]) if name == "content" else row[name] for name in MeasurementRow.__slots__
+            })
+            for row in rows
+        ]  # fmt: skip

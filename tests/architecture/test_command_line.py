@@ -29,13 +29,16 @@ def test_help_of_each_verb(verb: str) -> None:
 
 
 def test_help_appears_quickly() -> None:
-    """Goal: under 0.4 s on an idle machine; here the fastest of five, against a bare interpreter's start."""
-    seconds = []
+    """Goal: under 0.4 s on an idle machine, or so many starts of a bare interpreter where the machine is busy."""
+    seconds, bare = [], []
     for _ in range(5):
         begin = time.perf_counter()
         run("distil", "--help")
         seconds.append(time.perf_counter() - begin)
-    assert min(seconds) < 0.4
+        begin = time.perf_counter()
+        subprocess.run([sys.executable, "-c", ""], check=True, timeout=60)
+        bare.append(time.perf_counter() - begin)
+    assert min(seconds) < max(0.4, 16 * min(bare)), (seconds, bare)
 
 
 def test_no_help_text_loads_the_learning_library() -> None:

@@ -268,7 +268,7 @@ def test_a_measurement_is_given_the_policies_to_compare(
     assert folder.read_bytes("input-clone.policy") == samples.policy(1)
     assert not folder.has("input-in-service.policy")
     assert folder.read_json("job.json")["options"] == {
-        "version": 2, "clone": 1, "in_service": 0, "closed_loop_episodes": 4, "seed": 9,
+        "version": 2, "clone": 1, "in_service": 0, "against": 0, "closed_loop_episodes": 4, "seed": 9,
     }  # fmt: skip
     assert [one.split for one in folder.read_episodes()] == ["train", "held-out", "train"]
     client.ask(CancelJob, JobReply, job=job, who="ann")

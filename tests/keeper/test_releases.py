@@ -199,3 +199,33 @@ def test_a_version_is_shown_with_its_file_on_request(desk: Client, samples: Samp
     assert shown.policy == samples.policy(GOOD)
     assert shown.measurement == figures(0.1)
     assert desk.ask(GetVersion, VersionReply, version=GOOD).policy is None
+
+
+def test_measuring_again_until_the_gate_opens_does_not_open_it(
+    versions: Samples, settings: ServiceSettings, server: PretendedServer, keeper: KeeperProcess, client: Client
+) -> None:
+    keeper.stop()
+    store = Store(settings.database)
+    rig = store.rigs.get("yard-crane").rig
+    for high in (0.01, 0.3, 0.02):  # as chance may have it, on other start states
+        store.versions.add_measurement(GOOD, figures(high), rig_digest=rig.digest(), machine_digest=machine_digest(rig))
+    store.close()
+    client.close()
+    keeper.start()
+    reply = client.ask(Release, ReleaseReply, version=GOOD, who="ann")
+    assert not reply.released
+    assert "measurement 5" in reply.message and "0.3" in reply.message
+
+
+def test_a_measurement_of_a_machine_that_has_changed_since_counts_no_more(
+    versions: Samples, settings: ServiceSettings, server: PretendedServer, keeper: KeeperProcess, client: Client
+) -> None:
+    keeper.stop()
+    store = Store(settings.database)
+    rig = store.rigs.get("yard-crane").rig
+    store.versions.add_measurement(GOOD, figures(0.9), rig_digest="old", machine_digest="of another machine")
+    store.versions.add_measurement(GOOD, figures(0.1), rig_digest=rig.digest(), machine_digest=machine_digest(rig))
+    store.close()
+    client.close()
+    keeper.start()
+    assert client.ask(Release, ReleaseReply, version=GOOD, who="ann").released
