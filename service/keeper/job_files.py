@@ -52,6 +52,8 @@ def write_job(store: Store, job: JobRow, folder: JobFolder, progress: str) -> No
         folder.write_episodes([store.episodes.load(row) for row in rows])
         if job.kind == "measure":
             options.update(_write_inputs(store, job, folder))
+        if job.kind == "distil" and job.options.get("from_version"):
+            _write_cost(store, job, folder)
         content = {
             "job": job.job,
             "kind": job.kind,
@@ -128,6 +130,25 @@ def _write_inputs(store: Store, job: JobRow, folder: JobFolder) -> dict[str, Any
         "closed_loop_episodes": job.options.get("closed_loop_episodes", 50),
         "seed": job.options.get("seed", 1),
     }
+
+
+def _write_cost(store: Store, job: JobRow, folder: JobFolder) -> None:
+    """Write the recovered cost of a version and its policy, for a distillation from the cost alone."""
+    version = store.versions.get(int(job.options["from_version"]))
+    if version.rig != job.rig:
+        raise ConflictError(
+            f"version {version.version} is for {version.rig}, the job for {job.rig}; distil within a rig",
+            code="conflict.rig",
+        )
+    cost = version.provenance.get("recovered_cost")
+    if not isinstance(cost, dict):
+        raise ConflictError(
+            f"version {version.version} ({version.method}) has no recovered cost; only proximal-online versions have "
+            "one, distil one and name it",
+            code="conflict.no_cost",
+        )
+    folder.write_bytes("input-version.policy", store.versions.policy(version.version))
+    folder.write_json("input-cost.json", cost)
 
 
 def take_result(ledger: Ledger, job: JobRow, folder: JobFolder) -> None:

@@ -14,7 +14,7 @@ from nearhand.service.store.jobs import JobRow
 
 #: The whole-number options of each kind of job, with the least value each may have.
 _NUMBERS: dict[str, dict[str, int]] = {
-    "distil": {"episodes": 0},
+    "distil": {"episodes": 0, "from_version": 0},
     "measure": {"version": 1, "closed_loop_episodes": 0, "seed": 0},
     "inspect": {},
 }
@@ -68,6 +68,8 @@ def _check_options(kind: str, options: Mapping[str, Any]) -> None:
         if not isinstance(recipe, Mapping):
             raise ConfigError("distil: recipe must be a map; see the recipes that come with it", code="config.recipe")
         recipe_from_map(recipe)
+        if not isinstance(options.get("simulator", {}), Mapping):
+            raise ConfigError("distil: simulator must be a map of options to replace", code="config.options")
 
 
 def get_job(office: Office, request: GetJob) -> JobReply:

@@ -21,6 +21,7 @@ from nearhand.service.jobs.folder import JobFolder
 from nearhand.service.jobs.reporter import Reporter
 from nearhand.service.learn.checkpoints import read_checkpoint, write_checkpoint
 from nearhand.service.learn.cloning import Actor, Clone, clone
+from nearhand.service.learn.cost_job import run_from_cost
 from nearhand.service.learn.demonstrations import (
     Demonstration,
     blank_policy,
@@ -129,6 +130,8 @@ def run_distil(
         ConfigError: the recipe or the simulator cannot be used.
         LearningError: nothing to learn from, diverged, or stopped.
     """
+    if folder.read_json("job.json").get("options", {}).get("from_version"):
+        return run_from_cost(folder, reporter, stopped, executor=executor)
     began_s = time.monotonic()
     torch.set_num_threads(1)
     lesson = read_lesson(folder)
@@ -275,6 +278,34 @@ def _offline(
     return Improved(actor, "proximal-offline", chosen, fitted.curves, messages, 0)
 
 
+def scene_of(lesson: Lesson, executor: Executor) -> Scene:
+    """Return what roll-outs and evaluations of a lesson share.
+
+    Raises:
+        ConfigError: the rig's simulator is not installed or its options are wrong.
+        LearningError: the rig names none.
+    """
+    make = RigSimulator(lesson.rig)
+    simulator = make()
+    lengths = [item.length for item in lesson.demonstrations]
+    return Scene(
+        rig=lesson.rig,
+        blank=lesson.blank,
+        demonstrations=lesson.demonstrations,
+        features=fit_features(len(lesson.rig.observations), lesson.demonstrations),
+        discount=effective_discount(lesson.recipe.online.discount, lengths),
+        horizon=min(int(simulator.max_steps), max(lengths)),
+        make=OneSimulator(simulator) if isinstance(executor, InProcess) else make,
+        executor=executor,
+        seed=lesson.recipe.seed,
+        pieces=lesson.recipe.online.pieces,
+        wanted=Wanted(
+            shown=np.stack([item.observations[0] for item in lesson.train]).astype(np.float64),
+            weights=np.asarray([item.weight for item in lesson.train], dtype=np.float64),
+        ),
+    )
+
+
 def _online(
     folder: JobFolder,
     lesson: Lesson,
@@ -285,25 +316,7 @@ def _online(
     executor: Executor,
 ) -> Improved:
     recipe = lesson.recipe
-    make = RigSimulator(lesson.rig)
-    simulator = make()
-    lengths = [item.length for item in lesson.demonstrations]
-    scene = Scene(
-        rig=lesson.rig,
-        blank=lesson.blank,
-        demonstrations=lesson.demonstrations,
-        features=fit_features(len(lesson.rig.observations), lesson.demonstrations),
-        discount=effective_discount(recipe.online.discount, lengths),
-        horizon=min(int(simulator.max_steps), max(lengths)),
-        make=OneSimulator(simulator) if isinstance(executor, InProcess) else make,
-        executor=executor,
-        seed=recipe.seed,
-        pieces=recipe.online.pieces,
-        wanted=Wanted(
-            shown=np.stack([item.observations[0] for item in lesson.train]).astype(np.float64),
-            weights=np.asarray([item.weight for item in lesson.train], dtype=np.float64),
-        ),
-    )
+    scene = scene_of(lesson, executor)
     run = OnlineProximalPoint(scene, cloned.actor, recipe.online, past_action_noise=recipe.clone.past_action_noise)
     restore_progress(folder, run, lesson.identity)
     total = recipe.online.iterations
