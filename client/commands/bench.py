@@ -16,6 +16,7 @@ BENCHES = {
     "many-rigs": "nearhand.client.bench_rigs",
     "endurance": "nearhand.client.faults.endurance",
     "faults": "nearhand.client.faults.campaign",
+    "gate": "nearhand.client.bench_gate",
     "novelty": "nearhand.client.bench_novelty",
 }
 #: What may be told to a benchmark that takes it.

@@ -8,13 +8,11 @@ from typing import Any
 
 from scipy.stats import beta
 
-from nearhand.service.measure.gate import judge
+from nearhand.service.measure.gate import FEWEST_CLOSED_LOOP, PROPORTIONS, is_too_few, judge
 from nearhand.service.measure.intervals import FEWEST, LEVEL
 from nearhand.service.rigs import Bound
 
 MOST = 100_000
-#: Figures that are shares of episodes, with exact intervals.
-PROPORTIONS = (".success", ".novelty_trip_rate")
 
 
 def plan(
@@ -45,7 +43,7 @@ def _row(verdict: Mapping[str, Any], told: Mapping[str, Any]) -> dict[str, Any]:
             needed = (
                 _proportion(value, limit, upper=upper)
                 if verdict["figure"].endswith(PROPORTIONS)
-                else _mean(told, room, upper=upper)
+                else _mean(verdict["figure"], told, room, upper=upper)
             )
     return {
         "figure": verdict["figure"], "bound": verdict["bound"], "value": value, "limit": limit, "now": n,
@@ -53,13 +51,14 @@ def _row(verdict: Mapping[str, Any], told: Mapping[str, Any]) -> dict[str, Any]:
     }  # fmt: skip
 
 
-def _mean(told: Mapping[str, Any], room: float, *, upper: bool) -> int | None:
+def _mean(name: str, told: Mapping[str, Any], room: float, *, upper: bool) -> int | None:
     end = told.get("high" if upper else "low")
     if end is None:
         return None
     half = abs(float(end) - float(told["value"]))
     needed = math.ceil(int(told["n"]) * (half / room) ** 2)
-    return max(needed, FEWEST) if needed <= MOST else None
+    least = FEWEST_CLOSED_LOOP if is_too_few(name, needed) else FEWEST
+    return max(needed, least) if needed <= MOST else None
 
 
 def _proportion(value: float, limit: float, *, upper: bool) -> int | None:

@@ -71,3 +71,15 @@ def test_a_bound_relative_to_the_version_in_service() -> None:
 def test_every_bound_has_its_verdict_in_order() -> None:
     both = {"figures": {**measured("gap", 0, 2)["figures"], **measured("score", 0.9, 1)["figures"]}}
     assert [verdict["met"] for verdict in judge([UPPER, LOWER], both, None)] == [False, True]
+
+
+def test_too_few_closed_loop_episodes_pass_no_gate() -> None:
+    # Rare failures: with ten episodes and one failure in eight, (7/8)^10 = 26 % of measurements see none.
+    bound = Bound(figure="closed_loop.score", at_least=0.8)
+    good = {"value": 0.95, "low": 0.9, "high": 1.0}
+    few, enough = ({"figures": {"closed_loop.score": {**good, "n": n}}} for n in (29, 30))
+    refused, passed = judge([bound], few, None)[0], judge([bound], enough, None)[0]
+    assert not refused["met"] and "at least 30 episodes, there are 29" in refused["sentence"]
+    assert passed["met"] and "30" not in passed["sentence"]
+    exact = Bound(figure="closed_loop.success", at_least=0.5)
+    assert judge([exact], {"figures": {"closed_loop.success": {**good, "n": 12}}}, None)[0]["met"]
