@@ -287,12 +287,15 @@ def scene_of(lesson: Lesson, executor: Executor) -> Scene:
     """
     make = RigSimulator(lesson.rig)
     simulator = make()
-    lengths = [item.length for item in lesson.demonstrations]
+    # Fragments were cloned; of the whole task, its starts and the expert's expectations they say nothing.
+    whole = [index for index, item in enumerate(lesson.train) if not item.fragment] or [*range(len(lesson.train))]
+    demonstrations = [lesson.demonstrations[index] for index in whole]
+    lengths = [item.length for item in demonstrations]
     return Scene(
         rig=lesson.rig,
         blank=lesson.blank,
-        demonstrations=lesson.demonstrations,
-        features=fit_features(len(lesson.rig.observations), lesson.demonstrations),
+        demonstrations=demonstrations,
+        features=fit_features(len(lesson.rig.observations), demonstrations),
         discount=effective_discount(lesson.recipe.online.discount, lengths),
         horizon=min(int(simulator.max_steps), max(lengths)),
         make=OneSimulator(simulator) if isinstance(executor, InProcess) else make,
@@ -300,8 +303,8 @@ def scene_of(lesson: Lesson, executor: Executor) -> Scene:
         seed=lesson.recipe.seed,
         pieces=lesson.recipe.online.pieces,
         wanted=Wanted(
-            shown=np.stack([item.observations[0] for item in lesson.train]).astype(np.float64),
-            weights=np.asarray([item.weight for item in lesson.train], dtype=np.float64),
+            shown=np.stack([lesson.train[index].observations[0] for index in whole]).astype(np.float64),
+            weights=np.asarray([lesson.train[index].weight for index in whole], dtype=np.float64),
         ),
     )
 

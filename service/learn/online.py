@@ -98,7 +98,7 @@ class Progress:
 
 
 @dataclass(frozen=True)
-class _Evaluated:
+class Evaluated:
     """One evaluation's result at its N transitions: windows, reference means and variance, Q, the expert it saw."""
 
     windows: torch.Tensor
@@ -114,7 +114,7 @@ class OnlineProximalPoint:
     def __init__(self, scene: Scene, clone: Actor, recipe: OnlineRecipe, *, past_action_noise: float = 0.0) -> None:
         self.scene, self.recipe, self.clone = scene, recipe, clone
         d, m = scene.blank.input_size, scene.blank.action_size
-        self._critic = QuadraticCritic(d, m, recipe.critic_hidden, gain=float((1 - scene.discount) ** -0.5))
+        self.critic = QuadraticCritic(d, m, recipe.critic_hidden, gain=float((1 - scene.discount) ** -0.5))
         generator = np.random.default_rng((scene.seed, 2, 0))
         windows, actions, weights = stack_pairs(scene.demonstrations)
         self._anchor = Anchor(
@@ -129,7 +129,7 @@ class OnlineProximalPoint:
         self.progress = Progress(
             actor=Adam(clone.flat.clone()),
             log_sd=np.maximum(clone.log_sd, np.log(recipe.sd_start)).astype(np.float32),
-            critic=Adam(self._critic.draw(generator)),
+            critic=Adam(self.critic.draw(generator)),
             cost=Adam(torch.zeros(size)),
             absorbing=Adam(torch.zeros(1)),
             cost_sum=np.zeros(size),
@@ -147,30 +147,30 @@ class OnlineProximalPoint:
         """Return the distance that as many fresh episodes of the expert would have; NaN from one demonstration."""
         return float(np.sqrt(self._expert_trace * (1 / len(self.scene.demonstrations) + 1 / rollouts)))
 
-    def _evaluate(self, rollouts: Rollouts, reference: Actor) -> tuple[dict[str, float], _Evaluated]:
+    def evaluate(self, rollouts: Rollouts, reference: Actor) -> tuple[dict[str, float], Evaluated]:
         scene, recipe, state = self.scene, self.recipe, self.progress
         generator = np.random.default_rng((scene.seed, 2, 1, state.iteration))
         sample = draw_sample(scene.features, rollouts, reference, scene.discount, recipe.transitions, generator)
         variance = torch.from_numpy(np.exp(2 * reference.log_sd))
-        expert = self._expert(self._noise(rollouts, reference))
+        expert = self.expected(self.explored_variance(rollouts, reference))
         critic, cost, absorbing = state.critic.values, state.cost.values, state.absorbing.values
         for leaf in (critic, cost, absorbing):
             leaf.requires_grad_()
         setting = Setting(1.0, state.alpha, scene.discount, variance, torch.from_numpy(expert.astype(np.float32)))
         with torch.no_grad():
-            delta, _, at = residuals(self._critic, critic, cost, absorbing[0], sample, setting)
-            budget = self._budget()
+            delta, _, at = residuals(self.critic, critic, cost, absorbing[0], sample, setting)
+            budget = self.budget()
             here = at.at(sample.here)
             alpha = choose_alpha(here, sample.mean[sample.here], variance, budget)
             if state.iteration > 0:
                 setting = Setting(1.0, alpha, scene.discount, variance, setting.expert)
-                delta, _, at = residuals(self._critic, critic, cost, absorbing[0], sample, setting)
+                delta, _, at = residuals(self.critic, critic, cost, absorbing[0], sample, setting)
         value = float("nan")
         for step in range(recipe.inner_steps if state.iteration else max(recipe.first_inner_steps, recipe.inner_steps)):
             if step % 10 == 0:
                 eta, _ = tilting_strength(sample.log_weight, delta.detach(), recipe.ess_floor)
                 setting = Setting(eta, setting.alpha, scene.discount, variance, setting.expert)
-            delta, values, at = residuals(self._critic, critic, cost, absorbing[0], sample, setting)
+            delta, values, at = residuals(self.critic, critic, cost, absorbing[0], sample, setting)
             gain = objective(delta, values, cost, absorbing[0], sample, setting)
             gradients = torch.autograd.grad(gain, (critic, cost, absorbing))
             value = float(gain.detach())
@@ -185,7 +185,7 @@ class OnlineProximalPoint:
             with torch.no_grad():
                 project_cost(cost)
         with torch.no_grad():
-            delta, _, at = residuals(self._critic, critic, cost, absorbing[0], sample, setting)
+            delta, _, at = residuals(self.critic, critic, cost, absorbing[0], sample, setting)
             share = effective_share(sample.log_weight, delta, setting.eta)
             _, spread = tilting_strength(sample.log_weight, delta, recipe.ess_floor)
         figures = {
@@ -196,11 +196,11 @@ class OnlineProximalPoint:
             "delta_sd": spread,
             "eta": setting.eta,
         }
-        return figures, _Evaluated(
+        return figures, Evaluated(
             sample.windows[sample.here], sample.mean[sample.here], variance, at.at(sample.here), expert
         )
 
-    def _expert(self, variance: Float64) -> Float64:
+    def expected(self, variance: Float64) -> Float64:
         """Return the expert's feature expectations (k + 1,), had its actions been explored with this variance (m,).
 
         Without it the cost would first of all punish the exploring itself, which the served policy does not do.
@@ -215,7 +215,7 @@ class OnlineProximalPoint:
         means, absorbed = discounted_means(scene.features, explored, scene.discount, scene.horizon)
         return np.append(self._share @ means, self._share @ absorbed)
 
-    def _noise(self, rollouts: Rollouts, reference: Actor) -> Float64:
+    def explored_variance(self, rollouts: Rollouts, reference: Actor) -> Float64:
         """Return the action variance (m,) that exploring adds to the expert's own, as it passed the limits."""
         count, periods = rollouts.asked.shape[:2]
         mean = reference.mean(rollouts.windows[:, :-1].reshape(count * periods, -1)).reshape(count, periods, -1)
@@ -224,7 +224,7 @@ class OnlineProximalPoint:
         explored = np.minimum(passed, np.exp(2 * reference.log_sd))
         return np.asarray(np.maximum(explored - np.exp(2 * self.clone.log_sd), 0.0), dtype=np.float64)
 
-    def _budget(self) -> float:
+    def budget(self) -> float:
         recipe = self.recipe
         part = self.progress.iteration / max(recipe.iterations - 1, 1)
         return float(self.progress.caution * recipe.kl_first * (recipe.kl_last / recipe.kl_first) ** part)
@@ -249,7 +249,7 @@ class OnlineProximalPoint:
         )  # fmt: skip
         rollouts = matched(scene, rollouts)
         means = mean_features(scene.features, rollouts, scene.discount)
-        figures, evaluated = self._evaluate(rollouts, reference)
+        figures, evaluated = self.evaluate(rollouts, reference)
         state.cost_sum = state.cost_sum + state.cost.values.detach().numpy()
         distance = float(np.linalg.norm(means - evaluated.expert))
         message = self._keep_or_return(distance, reference)
@@ -293,11 +293,11 @@ class OnlineProximalPoint:
             f"{state.first_distance:.3g}; back to the best iterate with half the step"
         )
 
-    def _improve(self, evaluated: _Evaluated, reference: Actor) -> dict[str, float]:
+    def _improve(self, evaluated: Evaluated, reference: Actor) -> dict[str, float]:
         recipe, state = self.recipe, self.progress
         generator = np.random.default_rng((self.scene.seed, 2, 3, state.iteration))
         with torch.no_grad():
-            alpha = choose_alpha(evaluated.at, evaluated.mean, evaluated.variance, self._budget())
+            alpha = choose_alpha(evaluated.at, evaluated.mean, evaluated.variance, self.budget())
             if recipe.improvement == "sampled":
                 targets = sampled_targets(evaluated.at, evaluated.mean, evaluated.variance, alpha, generator)
             else:
