@@ -7,7 +7,11 @@ other episode, through every table and export.
 from __future__ import annotations
 
 import re
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from nearhand.service.episodes.episode import Episode
 
 TASK = "correction"
 #: For so long after taking over, the operator is still finding into it (Kelly et al. 2018 report 0.3 to 0.5 s).
@@ -37,3 +41,20 @@ class Correction:
         """Return what an episode's task and notes say, or None if it is no correction."""
         found = HEAD.match(notes) if task == TASK else None
         return None if found is None else cls(int(found["version"]), float(found["transient"]))
+
+
+def as_fragment(episode: Episode, correction: Correction) -> Episode | None:
+    """Return a correction as training sees it: without its transient, and as no start; None if nothing is left.
+
+    The rule of correction by take-over: the first moments show the change of driver and not how to drive, and where the
+    operator took over is no place where the task begins (Kelly et al. 2018, HG-DAgger, from memory).
+    """
+    if not episode.length:
+        return None
+    begin = int(np.searchsorted(episode.times_s, episode.times_s[0] + correction.transient_s - 1e-9))
+    if begin >= episode.length:
+        return None
+    return replace(
+        episode, times_s=episode.times_s[begin:], observations=episode.observations[begin:],
+        actions=episode.actions[begin:], fragment=True,
+    )  # fmt: skip

@@ -26,6 +26,8 @@ class Episode:
         outcome: ``success``, ``failure``, ``cut`` or ``unknown``.
         split: which use it is reserved for.
         weight: its weight in training.
+        fragment: it did not begin where episodes of the task begin, so it says how to drive there and nothing of starts
+            or of the whole task.
     """
 
     episode: str
@@ -38,6 +40,7 @@ class Episode:
     outcome: str = "unknown"
     split: Split = "train"
     weight: float = 1.0
+    fragment: bool = False
 
     @property
     def length(self) -> int:

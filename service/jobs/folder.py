@@ -81,7 +81,7 @@ class JobFolder:
             tensors[f"{index}.times"] = item.times_s
             tensors[f"{index}.observations"] = np.ascontiguousarray(item.observations)
             tensors[f"{index}.actions"] = np.ascontiguousarray(item.actions)
-            names = ("episode", "rig", "operator", "terminated", "outcome", "split", "weight")
+            names = ("episode", "rig", "operator", "terminated", "outcome", "split", "weight", "fragment")
             facts.append({name: getattr(item, name) for name in names})
         self.write_bytes("episodes.safetensors", save_tensors(tensors, metadata={"episodes": json.dumps(facts)}))
 

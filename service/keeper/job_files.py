@@ -10,6 +10,8 @@ from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
 
+from nearhand.service.episodes.correction import Correction, as_fragment
+from nearhand.service.episodes.episode import Episode
 from nearhand.service.errors import ConflictError, NearhandError, PolicyFormatError, StoreError
 from nearhand.service.jobs.folder import JobFolder
 from nearhand.service.keeper.ledger import Ledger, log_line
@@ -49,7 +51,7 @@ def write_job(store: Store, job: JobRow, folder: JobFolder, progress: str) -> No
     rows = chosen_episodes(store, job)
     options = dict(job.options)
     try:
-        folder.write_episodes([store.episodes.load(row) for row in rows])
+        folder.write_episodes(_episodes(store, job, rows))
         if job.kind == "measure":
             options.update(_write_inputs(store, job, folder))
         if job.kind == "distil" and job.options.get("from_version"):
@@ -86,6 +88,19 @@ def chosen_episodes(store: Store, job: JobRow) -> list[EpisodeRow]:
             code="conflict.no_demonstrations",
         )
     return rows
+
+
+def _episodes(store: Store, job: JobRow, rows: Sequence[EpisodeRow]) -> list[Episode]:
+    """Return the episodes' samples; corrections lose their transient, except where they are inspected as they came."""
+    found: list[Episode] = []
+    for row in rows:
+        episode: Episode | None = store.episodes.load(row)
+        correction = Correction.of(row.task, row.notes)
+        if episode is not None and correction is not None and job.kind != "inspect":
+            episode = as_fragment(episode, correction)
+        if episode is not None:
+            found.append(episode)
+    return found
 
 
 def _given(rows: Sequence[EpisodeRow]) -> dict[str, Any]:
