@@ -17,10 +17,11 @@ BENCHES = {
     "endurance": "nearhand.client.faults.endurance",
     "faults": "nearhand.client.faults.campaign",
     "gate": "nearhand.client.bench_gate",
+    "learning": "nearhand.client.bench_learning",
     "novelty": "nearhand.client.bench_novelty",
 }
 #: What may be told to a benchmark that takes it.
-OPTIONS = ("seconds", "count", "seeds")
+OPTIONS = ("seconds", "count", "seeds", "rigs", "quick")
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
@@ -29,6 +30,10 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--seconds", type=float, help="how long to measure, where a benchmark can be told")
     parser.add_argument("--count", type=int, help="how many (injections, decisions, rigs), where it can be told")
     parser.add_argument("--seeds", type=int, help="how many seeds, where it can be told")
+    parser.add_argument("--rigs", help="which rigs, with commas between, where it can be told")
+    parser.add_argument(
+        "--quick", action="store_true", default=None, help="spend next to nothing, to see it run, where it can be told"
+    )
     parser.add_argument("--json", action="store_true", help="print one JSON object and nothing else")
 
 

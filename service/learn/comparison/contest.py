@@ -11,6 +11,7 @@ from typing import Any
 
 import numpy as np
 import torch
+from pydantic import Field
 
 from nearhand.service.episodes.episode import Episode
 from nearhand.service.jobs.folder import JobFolder
@@ -51,8 +52,8 @@ class Contest(Frozen):
     demonstrations: int
     seed: int
     methods: tuple[str, ...] = ("clone", "proximal-online")
-    recipe: dict[str, Any] = {}
-    shifts: dict[str, dict[str, Any]] = {}
+    recipe: dict[str, Any] = Field(default_factory=dict)
+    shifts: dict[str, dict[str, Any]] = Field(default_factory=dict)
     gains: bool = False
 
 

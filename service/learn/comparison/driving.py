@@ -150,5 +150,5 @@ def scale_of(rig: Rig, changes: Mapping[str, Any] | None = None, episodes: int =
 def linear_gain(observations: Array, actions: Array) -> Array:
     """Return the least-squares gain K (m, n) of actions (N, m) ≈ -K·x + offset over observations (N, n)."""
     table = np.column_stack([observations, np.ones(len(observations))])
-    solution: Array = np.linalg.lstsq(table, actions, rcond=None)[0]
-    return -solution[:-1].T
+    solution = np.linalg.lstsq(table, actions, rcond=None)[0]
+    return np.asarray(-solution[:-1].T, dtype=np.float64)

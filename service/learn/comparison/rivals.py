@@ -60,11 +60,11 @@ class Rival(OnlineProximalPoint, ABC):
         setting = Setting(1.0, state.alpha, scene.discount, variance, torch.zeros(len(expert)))
         weight = torch.exp(sample.log_weight)
         steps = recipe.inner_steps if state.iteration else max(recipe.first_inner_steps, recipe.inner_steps)
-        target, spread, at = costs, float("nan"), None
+        target, spread = costs, float("nan")
         for step in range(steps):
             if step % REFRESH == 0:
                 with torch.no_grad():
-                    target, values, at = self._target(sample, setting, critic, absorbing, costs)
+                    target, at = self._target(sample, setting, critic, absorbing, costs)
                     if step == 0 and state.iteration:
                         alpha = choose_alpha(at.at(sample.here), sample.mean[sample.here], variance, self.budget())
                         setting = replace(setting, alpha=alpha)
@@ -84,11 +84,11 @@ class Rival(OnlineProximalPoint, ABC):
 
     def _target(
         self, sample: Sample, setting: Setting, critic: Tensor, absorbing: Tensor, costs: Tensor
-    ) -> tuple[Tensor, Tensor, Coefficients]:
+    ) -> tuple[Tensor, Coefficients]:
         nothing = torch.zeros_like(setting.expert)
-        delta, values, at = residuals(self.critic, critic, nothing, absorbing[0], sample, setting)
+        delta, _, at = residuals(self.critic, critic, nothing, absorbing[0], sample, setting)
         # With no cost the residual is g V' - Q, so the target c + g V' is the cost, the residual and Q.
-        return costs + delta + self._values(sample, critic, absorbing), values, at
+        return costs + delta + self._values(sample, critic, absorbing), at
 
 
 class FeatureMatching(Rival):
@@ -107,7 +107,7 @@ class FeatureMatching(Rival):
             self._mixture = means
         else:
             move = means - self._mixture
-            part = float(move @ (expert - self._mixture) / max(move @ move, 1e-12))
+            part = float(move @ (expert - self._mixture)) / max(float(move @ move), 1e-12)
             self._mixture = self._mixture + np.clip(part, 0.0, 1.0) * move
         gap = self._mixture - expert
         weights = torch.from_numpy((gap / max(float(np.linalg.norm(gap)), 1e-12)).astype(np.float32))
@@ -128,7 +128,7 @@ class Adversarial(Rival):
         """Train the discriminator on this batch, return its costs (N + 1,)."""
         scene, recipe = self.scene, self.recipe
         generator = np.random.default_rng((scene.seed, 6, self.progress.iteration))
-        windows, actions, weights = stack_pairs(scene.demonstrations)
+        windows, actions, _ = stack_pairs(scene.demonstrations)
         sd = np.sqrt(self.explored_variance(rollouts, self.actor)).astype(np.float32)
         shown = torch.from_numpy(np.concatenate([windows, actions], axis=1))
         own = torch.cat([sample.windows[sample.here], sample.actions], dim=1)
