@@ -21,7 +21,7 @@ BENCHES = {
     "novelty": "nearhand.client.bench_novelty",
 }
 #: What may be told to a benchmark that takes it.
-OPTIONS = ("seconds", "count", "seeds", "rigs", "quick")
+OPTIONS = ("seconds", "count", "seeds", "rigs", "methods", "quick")
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
@@ -31,6 +31,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--count", type=int, help="how many (injections, decisions, rigs), where it can be told")
     parser.add_argument("--seeds", type=int, help="how many seeds, where it can be told")
     parser.add_argument("--rigs", help="which rigs, with commas between, where it can be told")
+    parser.add_argument("--methods", help="which methods, with commas between, where it can be told")
     parser.add_argument(
         "--quick", action="store_true", default=None, help="spend next to nothing, to see it run, where it can be told"
     )
