@@ -10,6 +10,8 @@ from importlib.metadata import version as software_version
 from pathlib import Path
 from typing import Any
 
+from pydantic import ValidationError
+
 from nearhand.client import plots
 from nearhand.client.desk import Desk
 from nearhand.client.tables import with_interval
@@ -31,11 +33,16 @@ from nearhand.service.bus.desk_messages import (
     VerifyReply,
     VersionReply,
 )
+from nearhand.service.bus.shadow_messages import GetShadow, ShadowReply
 from nearhand.service.clock import utc_now
-from nearhand.service.errors import ConfigError, NearhandError, StoreError
+from nearhand.service.envelope.budget import budgets, unbraked
+from nearhand.service.errors import ConfigError, NearhandError, StoreError, UnknownNameError
+from nearhand.service.rigs import Rig
 
 MOST_EVENTS = 60
 MOST_PROVENANCE = 400
+#: Events that happen all the time and decide nothing.
+EVERYDAY = ("session", "loaded", "job-queued", "job-started", "job-done")
 #: Figures that are distances or rates, for the picture; the rest stand in the table.
 PICTURED = (
     "action_error.rmse_fraction", "feature_distance.l2", "feature_distance.l1", "feature_distance.linf", "mmd2",
@@ -75,6 +82,7 @@ def gather(desk: Desk, version: int) -> dict[str, Any]:
         "health": health,
         "learning": _job_result(desk, found.provenance.get("job")),
         "inspection": _last_inspection(desk, rig),
+        "shadow": _shadow(desk, rig, version),
     }
 
 
@@ -86,6 +94,31 @@ def all_events(desk: Desk, rig: str) -> list[dict[str, Any]]:
         events.extend(page)
         after = int(page[-1]["event"])
     return events
+
+
+def _shadow(desk: Desk, rig: str, version: int) -> dict[str, Any]:
+    try:
+        return desk.ask(GetShadow, ShadowReply, rig=rig, version=version).model_dump()
+    except UnknownNameError:
+        return {}
+
+
+def folded(events: Sequence[Table]) -> list[dict[str, Any]]:
+    """Return events with runs of the everyday ones (sessions, jobs, loads) each told in one line."""
+    rows: list[dict[str, Any]] = []
+    for event in events:
+        what = str(event["what"])
+        if what not in EVERYDAY:
+            rows.append(dict(event))
+            continue
+        if not rows or "counts" not in rows[-1]:
+            rows.append({**event, "who": "", "counts": Counter()})
+        rows[-1]["counts"][what] += 1
+    for row in rows:
+        if "counts" in row:
+            row["what"] = ", ".join(f"{number} {what}" for what, number in row["counts"].items())
+            row["why"] = "from here on, until the next line"
+    return rows
 
 
 def _job_result(desk: Desk, job: object) -> dict[str, Any]:
@@ -118,6 +151,10 @@ def render(facts: Mapping[str, Any]) -> str:
     learning = facts["learning"]
     pictures, alt = draw(measurement, learning.get("curves") or {})
     chain = facts["chain"]
+    try:
+        rig: Rig | None = Rig.model_validate(facts["rig"])
+    except ValidationError:
+        rig = None
     return environment.from_string(text).render(
         version=version,
         rig=facts["rig"],
@@ -132,7 +169,12 @@ def render(facts: Mapping[str, Any]) -> str:
         alt=alt,
         chosen=_chosen(learning.get("chosen")),
         health=facts["health"],
-        events=facts["events"][-MOST_EVENTS:],
+        events=folded(facts["events"])[-MOST_EVENTS:],
+        budget=budgets(rig) if rig is not None else (),
+        unbraked=unbraked(rig) if rig is not None else (),
+        truncation=measurement.get("truncation_bound") or {},
+        against=measurement.get("against"),
+        shadow=facts.get("shadow") or {},
         chain=f"{chain['events']} events; hash chain {'intact' if chain['intact'] else 'BROKEN: ' + chain['message']}.",
         provenance=_provenance(version),
         written_utc=utc_now(),
@@ -167,10 +209,6 @@ def draw(measurement: Table, curves: Mapping[str, Sequence[float | None]]) -> tu
         pictures["curves"] = plots.curves(curves, drawn)
         alt["curves"] = f"Diagnostics by iteration: {', '.join(name.replace('_', ' ') for name in drawn)}."
     return pictures, alt
-
-
-def _whole(figures: Mapping[str, Table]) -> dict[str, dict[str, Any]]:
-    return {name: {"floor": None, "clone": None, **row} for name, row in figures.items()}
 
 
 def _by_operator(episodes: Sequence[Table]) -> list[dict[str, Any]]:

@@ -13,6 +13,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     add_desk_options(parser)
     parser.add_argument("version", type=int, help="the version's number")
     parser.add_argument("-o", "--output", type=Path, default=Path("report.html"), help="file (default: %(default)s)")
+    parser.add_argument("--pdf", action="store_true", help="also print it as PDF beside the page, by a browser")
 
 
 def run(options: argparse.Namespace) -> int:
@@ -21,8 +22,16 @@ def run(options: argparse.Namespace) -> int:
 
     with open_desk(options) as desk:
         write_report(desk, options.version, options.output)
+    written = [options.output]
+    if options.pdf:
+        from nearhand.client.pdf import print_page
+
+        written.append(options.output.with_suffix(".pdf"))
+        print_page(*written)
     if options.json:
-        print_json({"version": options.version, "output": str(options.output.resolve())})
+        names = ("output", "pdf")
+        files = {name: str(path.resolve()) for name, path in zip(names, written, strict=False)}
+        print_json({"version": options.version, **files})
     else:
-        print(f"written: {options.output.resolve()}")
+        print("\n".join(f"written: {path.resolve()}" for path in written))
     return 0

@@ -80,8 +80,9 @@ class Lane:
         self._keyed = admission is not None
         if admission is not None:
             admission.guard(self.socket, name)
-        # Replies to a whole batch go out at once; a router drops what is over its limit without a word.
+        # Replies to a whole batch go out at once; unless told so, a router drops what is over its limit without a word.
         self.socket.setsockopt(zmq.SNDHWM, replies)
+        self.socket.setsockopt(zmq.ROUTER_MANDATORY, 1)
         self.address = bind(self.socket, address)
 
     def receive(self) -> Request | None:
@@ -120,8 +121,14 @@ class Lane:
                 code="wire.oversized",
             )
             data = encode(error_reply(oversized, echo))
-        with contextlib.suppress(zmq.Again, zmq.ZMQError):
-            self.socket.send_multipart([*request.envelope, data], flags=zmq.NOBLOCK)
+        parts = [*request.envelope, data]
+        with contextlib.suppress(zmq.ZMQError):
+            try:
+                self.socket.send_multipart(parts, flags=zmq.NOBLOCK)
+            except zmq.Again:
+                # Asking for events makes the library take note of replies that have left; a client that reads has room.
+                self.socket.getsockopt(zmq.EVENTS)
+                self.socket.send_multipart(parts, flags=zmq.NOBLOCK)
 
     def close(self) -> None:
         """Close the socket."""

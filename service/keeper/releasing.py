@@ -79,7 +79,10 @@ def judge_version(office: Office, rig: RigRow, measurement: MeasurementRow, pres
     for earlier in office.ledger.store.versions.measurements(measurement.version):
         if earlier.measurement == measurement.measurement or earlier.machine_digest != measurement.machine_digest:
             continue
-        for index, bound in enumerate(judge(rig.rig.gate, earlier.content, in_service)):
+        judged = judge(rig.rig.gate, earlier.content, in_service)
+        if any(bound["too_few"] for bound in judged):
+            continue  # it could not have opened the gate, and so was no attempt: few episodes serve to plan by
+        for index, bound in enumerate(judged):
             if verdicts[index]["met"] and not bound["met"]:
                 told = f"measurement {earlier.measurement}, {earlier.utc}: {bound['sentence']}"
                 verdicts[index] = plain({**bound, "sentence": told})

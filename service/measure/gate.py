@@ -25,7 +25,8 @@ def judge(bounds: Sequence[Bound], measurement: Measurement, in_service: Measure
         in_service: measurement of the version in service, for bounds relative to it.
 
     Returns:
-        Per bound: figure, bound, relative_to, limit, observed (the unfavourable end, or None), met, sentence.
+        Per bound: figure, bound, relative_to, limit, observed (the unfavourable end, or None), met, too_few
+        (episodes for this bound to be met at all), sentence.
     """
     return [_verdict(bound, measurement, in_service) for bound in bounds]
 
@@ -47,6 +48,7 @@ def _verdict(bound: Bound, measurement: Measurement, in_service: Measurement | N
         "limit": limit,
         "observed": observed,
         "met": bool(met and not few),
+        "too_few": few,
         "sentence": _sentence(bound, figure, observed, limit, factor, upper=upper)
         + (f"; and to at least {FEWEST_CLOSED_LOOP} episodes, there are {figure.get('n', 0)}" if few else ""),
     }

@@ -4,12 +4,15 @@ from __future__ import annotations
 
 import re
 from html.parser import HTMLParser
+from pathlib import Path
 from typing import Any
 
 import pytest
 
-from nearhand.client.report import render
+from nearhand.client.pdf import print_page
+from nearhand.client.report import folded, render
 from nearhand.configs import builtin_text
+from nearhand.service.errors import ConfigError
 from nearhand.service.rigs import rig_from_toml
 
 HOSTILE = "<script>alert(1)</script>"
@@ -137,3 +140,19 @@ def test_an_unmeasured_version_has_a_page_too(facts: dict[str, Any]) -> None:
     assert page.open == []
     assert "has not been measured" in page.text
     assert "No release was asked for yet" in page.text
+
+
+def test_everyday_events_are_told_in_one_line() -> None:
+    row = {"utc": "t", "who": "action-server", "why": ""}
+    events = [
+        {**row, "event": number, "what": what}
+        for number, what in enumerate(["session", "session", "job-done", "trip", "session", "release"], start=1)
+    ]
+    told = [(one["event"], one["what"]) for one in folded(events)]
+    assert told == [(1, "2 session, 1 job-done"), (4, "trip"), (5, "1 session"), (6, "release")]
+
+
+def test_a_machine_without_a_browser_says_so(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
+    monkeypatch.setenv("PATH", str(tmp_path))
+    with pytest.raises(ConfigError, match="none of chromium"):
+        print_page(tmp_path / "page.html", tmp_path / "page.pdf")
