@@ -281,3 +281,15 @@ def test_a_client_that_asks_and_does_not_read_costs_bounded_memory(
             grown = resident_bytes(number) - before
         assert grown < 60 * len(reply), "not the 200 that were asked for"
         assert service.process_number(KEEPER) == number
+
+
+def test_a_client_that_asks_fast_and_reads_gets_every_reply(
+    limited: Callable[[str], ServiceProcess], context: Context
+) -> None:
+    """The queue of replies is short, and the library learns late that it has emptied: none may be dropped for that."""
+    with limited("") as service, context.socket(zmq.DEALER) as quick:
+        quick.connect(service.lanes["desk"])
+        for k in range(2_000):
+            quick.send(b"\xc1" if k % 2 else encode(messages.Where(request=f"r{k}")))
+            assert quick.poll(5_000), k
+            assert msgpack.unpackb(quick.recv())["kind"] == ("error" if k % 2 else "where-reply")
