@@ -1,7 +1,8 @@
 """The exact method on finite models: the same proximal-point step with expectations instead of samples.
 
-It is the yardstick of the sampled method: every identity of the theory holds here to rounding. Costs are
-c = w over state-action pairs; occupancies are normalised to one.
+It is the yardstick of the sampled method: every identity of the theory holds here to rounding. Cost and Q are linear
+in features of the state-action pair, c = Φw and Q = Φθ, one-hot ones by default; occupancies are normalised to one.
+With other features the model has to be linear in them too, and the occupancy that is tilted is that of the features.
 
 Source: Viano et al., "Proximal Point Imitation Learning", NeurIPS 2022; the linear programme: Puterman, "Markov
 Decision Processes", 1994, sec. 6.9; recomputed here.
@@ -127,7 +128,20 @@ class Centre:
 
 @dataclass(frozen=True)
 class Evaluation:
-    """One solved step: cost (S, A), Q (S, A), G, λ (S, A), policy and its occupancy (S, A), duality gap, iterations."""
+    """One solved step.
+
+    Attributes:
+        cost, q: (S, A).
+        value: G.
+        pairs: λ (S, A), or that of the features (m,).
+        policy, occupancy: the improved policy (S, A) and its occupancy (S, A).
+        gap: duality gap.
+        iterations: of the inner method.
+        gradient_cost: norm of the projected gradient for the cost weights, zero where no member of the class is better.
+        gradient_q: norm of the gradient for the Q weights: the violation of the flow constraint in the features.
+        excitation: smallest eigenvalue of the features' second moments under ``occupancy``; the theory asks that it
+            stay away from zero over all iterates (persistent excitation).
+    """
 
     cost: Float64
     q: Float64
@@ -137,6 +151,24 @@ class Evaluation:
     occupancy: Float64
     gap: float
     iterations: int
+    gradient_cost: float
+    gradient_q: float
+    excitation: float
+
+
+@dataclass(frozen=True)
+class LinearFeatures:
+    """Features Φ (S·A, m), rows in the simplex, in which the model is linear: P = Φ M with kernel M (m, S)."""
+
+    phi: Float64
+    kernel: Float64
+
+
+def excitation_of(occupancy: Float64, features: LinearFeatures | None = None) -> float:
+    """Return the smallest eigenvalue of E φφᵀ under an occupancy (S, A); features are one-hot by default."""
+    if features is None:
+        return float(occupancy.min())
+    return float(np.linalg.eigvalsh((features.phi.T * occupancy.ravel()) @ features.phi)[0])
 
 
 class JointObjective:
@@ -169,6 +201,21 @@ class JointObjective:
         gain = -tilt / self.eta + (1 - model.discount) * model.start @ values - float(np.sum(self.expert * cost))
         return float(gain), pairs - self.expert, self._arriving(pairs)[:, None] * policy - pairs
 
+    def linear(self, features: LinearFeatures, w: Float64, theta: Float64) -> tuple[float, Float64, Float64]:
+        """Return G and its gradients (m,) for cost and Q weights (m,), with the feature occupancy tilted."""
+        model, phi = self.model, features.phi
+        q = (phi @ theta).reshape(self.expert.shape)
+        soft = _log_sum_exp(self._log_policy - self.alpha * q)
+        values = -soft / self.alpha
+        policy = np.exp(self._log_policy - self.alpha * q - soft[:, None])
+        centre, expert = phi.T @ self._centre.pairs.ravel(), phi.T @ self.expert.ravel()
+        logits = np.log(centre) - self.eta * (w + model.discount * features.kernel @ values - theta)
+        tilt = float(_log_sum_exp(logits))
+        occupied = np.exp(logits - tilt)
+        arriving = (1 - model.discount) * model.start + model.discount * occupied @ features.kernel
+        gain = -tilt / self.eta + (1 - model.discount) * model.start @ values - float(expert @ w)
+        return float(gain), occupied - expert, phi.T @ (arriving[:, None] * policy).ravel() - occupied
+
     def _tilted(self, delta: Float64) -> tuple[Float64, float]:
         logits = self._log_pairs - self.eta * delta
         tilt = float(_log_sum_exp(logits.ravel()))
@@ -188,14 +235,20 @@ class JointObjective:
         policy = np.exp(log_policy - _log_sum_exp(log_policy)[:, None])
         return cost_gradient + self.expert, policy
 
-    def primal(self, occupancy: Float64, kind: CostClass | None, cost: Float64) -> float:
+    def primal(
+        self, occupancy: Float64, kind: CostClass | None, cost: Float64, features: LinearFeatures | None = None
+    ) -> float:
         """Return the regularised problem's value at a flow-consistent occupancy: never below G."""
+
+        def seen(pairs: Float64) -> Float64:
+            return pairs if features is None else features.phi.T @ pairs.ravel()
+
         gap = occupancy - self.expert
-        distance = float(np.sum(cost * gap)) if kind is None else class_distance(gap, kind)
+        distance = float(np.sum(cost * gap)) if kind is None else class_distance(seen(gap), kind)
         old = self._centre.policy * occupancy.sum(axis=1, keepdims=True)
         return (
             distance
-            + relative_entropy(occupancy, self._centre.pairs) / self.eta
+            + relative_entropy(seen(occupancy), seen(self._centre.pairs)) / self.eta
             + (0.0 if np.isinf(self.alpha) else conditional_entropy(occupancy, old) / self.alpha)
         )
 
@@ -209,45 +262,68 @@ def evaluate(
     kind: CostClass | None,
     *,
     cost: Float64 | None = None,
+    features: LinearFeatures | None = None,
     tolerance: float = 1e-12,
+    gradient_tolerance: float = np.inf,
     limit: int = 200_000,
 ) -> Evaluation:
-    """Maximise G jointly over cost and Q, with no learning rate to choose, until the duality gap is closed.
+    """Maximise G jointly over cost and Q weights, with no learning rate to choose.
 
-    Accelerated projected gradient; the first step is 1/(α + 5η), a bound on the curvature for one-hot features, and
-    grows or shrinks by the sufficient-ascent test; momentum restarts when the objective falls.
+    Accelerated projected gradient; the first step is 1/(α + 5η), a bound on the curvature for features of norm one at
+    most, and grows or shrinks by the sufficient-ascent test; momentum restarts when the objective falls. It ends when
+    the duality gap and both gradient norms are within their tolerances.
 
     Args:
         model, centre, expert: the problem; ``expert`` is the occupancy (S, A) to be matched.
         eta, alpha: prox strengths; ``alpha`` may be infinite.
         kind: cost class; None keeps ``cost`` fixed.
-        cost: the fixed cost, or where to start.
+        cost: the fixed cost, or where to start with one-hot features.
+        features: for both cost and Q, of a model linear in them; one-hot by default.
         tolerance: of the duality gap.
+        gradient_tolerance: of the two gradient norms.
         limit: most iterations.
 
     Source: Beck & Teboulle 2009 (acceleration); O'Donoghue & Candès 2015 (restart).
     """
     objective = JointObjective(model, centre, expert, eta, alpha)
     shape = expert.shape
+    if features is not None and (np.isinf(alpha) or kind is None):
+        raise ValueError("features need a finite alpha and a cost class")
 
     def project(values: Float64) -> Float64:
-        return values if kind is None else project_class(values.ravel(), kind).reshape(shape)
+        return values if kind is None else project_class(values.ravel(), kind).reshape(values.shape)
 
-    w = project(np.zeros(shape) if cost is None else cost)
-    q = np.zeros((shape[0], 1)) if np.isinf(alpha) else np.zeros(shape)
+    def spread(weights: Float64) -> Float64:
+        return weights if features is None else (features.phi @ weights).reshape(shape)
+
+    def ascent(w: Float64, q: Float64) -> tuple[float, Float64, Float64]:
+        return objective(w, q) if features is None else objective.linear(features, w, q)
+
+    def norms(w: Float64, q: Float64) -> tuple[float, float]:
+        _, for_cost, for_q = ascent(w, q)
+        moved = project(w + for_cost) - w if kind is not None else np.zeros(1)
+        return float(np.linalg.norm(moved)), float(np.linalg.norm(for_q))
+
+    def gap_at(w: Float64, q: Float64, value: float) -> float:
+        occupancy = occupancy_of(model, objective.recover(spread(w), spread(q))[1])
+        return objective.primal(occupancy, kind, spread(w), features) - value
+
+    flat_shape = shape if features is None else (features.phi.shape[1],)
+    w = project(np.zeros(flat_shape) if cost is None else cost)
+    q = np.zeros((shape[0], 1)) if np.isinf(alpha) else np.zeros(flat_shape)
     best_w, best_q = w, q
     momentum_w, momentum_q, t = w, q, 1.0
-    value = objective(w, q)[0]
+    value = ascent(w, q)[0]
     step = 1.0 / ((0.0 if np.isinf(alpha) else alpha) + 5 * eta)
     gap = np.inf
     count = 0
     for count in range(1, limit + 1):
-        here, grad_w, grad_q = objective(momentum_w, momentum_q)
+        here, grad_w, grad_q = ascent(momentum_w, momentum_q)
         while True:
             new_w = project(momentum_w + step * grad_w) if kind is not None else w
             new_q = momentum_q + step * grad_q
             shift_w, shift_q = new_w - momentum_w, new_q - momentum_q
-            new_value = objective(new_w, new_q)[0]
+            new_value = ascent(new_w, new_q)[0]
             linear = float(np.sum(grad_w * shift_w) + np.sum(grad_q * shift_q))
             square = float(np.sum(shift_w**2) + np.sum(shift_q**2))
             if new_value >= here + linear - square / (2 * step) - ROUNDING:
@@ -262,35 +338,55 @@ def evaluate(
         w, q, value, t = new_w, new_q, new_value, t_next
         step *= 1.02
         if count % 25 == 0:
-            _, policy = objective.recover(w, q)
-            now = objective.primal(occupancy_of(model, policy), kind, w) - value
+            now = gap_at(w, q, value)
             if now < gap:
                 gap, best_w, best_q = now, w, q
-            if gap <= tolerance:
+            if gap <= tolerance and max(norms(best_w, best_q)) <= gradient_tolerance:
                 break
-    pairs, policy = objective.recover(best_w, best_q)
+    wide_w, wide_q = spread(best_w), spread(best_q)
+    pairs, policy = objective.recover(wide_w, wide_q)
+    best, for_cost, _ = ascent(best_w, best_q)
+    if features is not None:
+        pairs = for_cost + features.phi.T @ expert.ravel()
     occupancy = occupancy_of(model, policy)
-    return Evaluation(best_w, best_q, objective(best_w, best_q)[0], pairs, policy, occupancy, float(gap), count)
+    gradient_cost, gradient_q = norms(best_w, best_q)
+    return Evaluation(
+        wide_w, wide_q, best, pairs, policy, occupancy, float(gap), count,
+        gradient_cost, gradient_q, excitation_of(occupancy, features),
+    )  # fmt: skip
 
 
 def solve_online(
-    model: FiniteModel, expert: Float64, policy: Float64, eta: float, alpha: float, kind: CostClass, iterations: int
+    model: FiniteModel,
+    expert: Float64,
+    policy: Float64,
+    eta: float,
+    alpha: float,
+    kind: CostClass,
+    iterations: int,
+    features: LinearFeatures | None = None,
 ) -> list[Evaluation]:
     """Return the proximal-point iterates from a policy (S, A), each solved around the last one's occupancy."""
     occupancy = occupancy_of(model, policy)
     centre = Centre(occupancy, policy)
     solved: list[Evaluation] = []
     for _ in range(iterations):
-        solved.append(evaluate(model, centre, expert, eta, alpha, kind))
+        solved.append(evaluate(model, centre, expert, eta, alpha, kind, features=features))
         centre = Centre(solved[-1].occupancy, solved[-1].policy)
     return solved
 
 
 def solve_offline(
-    model: FiniteModel, expert: Float64, reference: Float64, eta: float, alpha: float, kind: CostClass
+    model: FiniteModel,
+    expert: Float64,
+    reference: Float64,
+    eta: float,
+    alpha: float,
+    kind: CostClass,
+    features: LinearFeatures | None = None,
 ) -> Evaluation:
     """Return one step whose occupancy centre is the expert itself and whose reference policy (S, A) is broad."""
-    return evaluate(model, Centre(expert, reference), expert, eta, alpha, kind)
+    return evaluate(model, Centre(expert, reference), expert, eta, alpha, kind, features=features)
 
 
 def relative_entropy_step(model: FiniteModel, centre: Float64, cost: Float64, eta: float) -> tuple[Float64, Float64]:

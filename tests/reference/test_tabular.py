@@ -9,13 +9,14 @@ from itertools import pairwise
 
 import numpy as np
 import pytest
-from scipy.optimize import check_grad
+from scipy.optimize import check_grad, linprog, minimize
 
 from nearhand.service.learn.tabular import (
     Centre,
     CostClass,
     FiniteModel,
     JointObjective,
+    LinearFeatures,
     cheapest,
     class_distance,
     conditional_entropy,
@@ -183,7 +184,7 @@ def test_objective_is_jointly_concave_along_random_chords(generator: np.random.G
     centre = random_policy(generator, model)
     expert = occupancy_of(model, random_policy(generator, model))
     objective = JointObjective(model, Centre(occupancy_of(model, centre), centre), expert, 2.0, 3.0)
-    for _ in range(500):
+    for _ in range(300):
         a, b, c, d = generator.normal(0, 2, (4, 5, 3))
         middle = objective((a + c) / 2, (b + d) / 2)[0]
         assert middle >= (objective(a, b)[0] + objective(c, d)[0]) / 2 - 1e-12
@@ -322,6 +323,88 @@ def test_exact_iterates_keep_the_proximal_point_rate() -> None:
     assert all(later < earlier for earlier, later in pairwise(found))
     assert all(distance <= bound / (k + 1) for k, distance in enumerate(found))
     assert found[-1] == pytest.approx(0.133, abs=2e-3)
+
+
+def programme(model: FiniteModel, estimate: np.ndarray, kind: CostClass) -> float:
+    """Return min over occupancies d of max over the class <w, d - estimate>: HiGHS; SLSQP for the Euclidean class."""
+    size = estimate.size
+    flow = np.repeat(np.eye(model.states), model.actions, axis=0).T
+    flow = flow - model.discount * model.transition.reshape(-1, model.states).T
+    right, flat = (1 - model.discount) * model.start, estimate.ravel()
+    if kind == "l2":
+        start = occupancy_of(model, np.full(estimate.shape, 1 / model.actions)).ravel()
+        found = minimize(
+            lambda d: 0.5 * np.sum((d - flat) ** 2), start, jac=lambda d: d - flat, bounds=[(0, None)] * size,
+            constraints={"type": "eq", "fun": lambda d: flow @ d - right, "jac": lambda _: flow}, method="SLSQP",
+            options={"ftol": 1e-14, "maxiter": 500},
+        )  # fmt: skip
+        return float(np.linalg.norm(found.x - flat))
+    many = size if kind == "linf" else 1
+    above = -np.eye(size) if kind == "linf" else -np.ones((size, 1))
+    rows, limits = [np.hstack([np.eye(size), above])], [flat]
+    if kind != "simplex":
+        rows.append(np.hstack([-np.eye(size), above]))
+        limits.append(-flat)
+    answer = linprog(
+        np.concatenate([np.zeros(size), np.ones(many)]), A_ub=np.vstack(rows), b_ub=np.concatenate(limits),
+        A_eq=np.hstack([flow, np.zeros((model.states, many))]), b_eq=right,
+        bounds=[(0, None)] * size + [(None, None)] * many, method="highs",
+    )  # fmt: skip
+    return float(answer.fun)
+
+
+@pytest.mark.parametrize("kind", KINDS)
+@pytest.mark.parametrize("seed", range(5))
+def test_random_models_reach_the_programmes_optimum_within_the_rate(kind: CostClass, seed: int) -> None:
+    # Twenty models; the estimate to be matched is one that no policy has, so the optimum is not zero.
+    generator = np.random.default_rng((KINDS.index(kind), seed))
+    model = random_model(generator, 4, 2)
+    reachable = occupancy_of(model, random_policy(generator, model))
+    estimate = 0.8 * reachable + 0.2 * generator.dirichlet(np.ones(8)).reshape(4, 2)
+    optimum = programme(model, estimate, kind)
+    assert optimum > 1e-3
+    policy = np.full((4, 2), 0.5)
+    first = occupancy_of(model, policy)
+    centre = Centre(first, policy)
+    for k in range(1, 13):
+        solved = evaluate(model, centre, estimate, 40.0, 40.0, kind, tolerance=2e-6, limit=1500)
+        centre = Centre(solved.occupancy, solved.policy)
+        distance = class_distance(solved.occupancy - estimate, kind)
+        # Chen & Teboulle 1993; KL(d* || d_0) <= -log of the smallest mass, H <= log of the number of actions.
+        assert distance - optimum <= (np.log(1 / first.min()) + np.log(2)) / (40.0 * k) + k * 1e-5
+    assert -1e-8 < distance - optimum < 1e-4
+
+
+@pytest.mark.parametrize("kind", KINDS)
+def test_linear_features_solve_a_linear_model_like_all_pairs_would(kind: CostClass) -> None:
+    # P = Phi M with features in the simplex: Q is linear in the features, and the gap closes.
+    generator = np.random.default_rng(11)
+    phi, kernel = generator.dirichlet(np.ones(4), 10), generator.dirichlet(np.ones(5), 4)
+    features = LinearFeatures(phi, kernel)
+    transition = (phi @ kernel).reshape(5, 2, 5)
+    model = FiniteModel(transition, generator.dirichlet(np.ones(5)), 0.9)
+    reference = random_policy(generator, model)
+    expert = occupancy_of(model, random_policy(generator, model))
+    for solved in (
+        solve_online(model, expert, reference, 2.0, 3.0, kind, 1, features)[0],
+        solve_offline(model, expert, reference, 2.0, 3.0, kind, features),
+    ):
+        assert abs(solved.gap) < 1e-8
+        # At the optimum the tilted occupancy of the features is that of the improved policy.
+        np.testing.assert_allclose(solved.pairs, phi.T @ solved.occupancy.ravel(), atol=1e-4)
+        moments = sum(m * np.outer(f, f) for m, f in zip(solved.occupancy.ravel(), phi, strict=True))
+        assert solved.excitation == pytest.approx(float(np.linalg.eigvalsh(moments).min()), abs=1e-12)
+        assert solved.excitation > 0
+
+
+def test_search_stops_on_both_gradient_norms_and_the_gap() -> None:
+    model = chain()
+    expert, uniform = occupancy_of(model, CHAIN_EXPERT), occupancy_of(model, UNIFORM)
+    loose = evaluate(model, Centre(uniform, UNIFORM), expert, 1.0, 1.0, "l2", tolerance=1e-3)
+    tight = evaluate(model, Centre(uniform, UNIFORM), expert, 1.0, 1.0, "l2", tolerance=1e-3, gradient_tolerance=1e-7)
+    assert tight.iterations > loose.iterations
+    assert max(tight.gradient_cost, tight.gradient_q) <= 1e-7 < max(loose.gradient_cost, loose.gradient_q)
+    assert tight.excitation == tight.occupancy.min()
 
 
 def test_large_exact_step_reaches_the_expert_at_once() -> None:
