@@ -21,6 +21,7 @@ VERBS: dict[str, str] = {
     "tryout": "go through the whole job once, with a simulated rig and injected faults",
     "collect": "stream demonstrations from a simulated rig or import them from a file",
     "inspect": "check the demonstrations of a rig",
+    "curate": "keep, exclude, trim, weight and tag demonstrations; save training sets",
     "distil": "train a policy from the demonstrations",
     "measure": "measure a version's distance to the expert",
     "release": "put a measured version in service, through the gate",

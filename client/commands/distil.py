@@ -37,6 +37,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--recipe", default="standard", help="a built-in recipe or a .toml file (default: %(default)s)")
     parser.add_argument("--episodes", type=int, default=0, help="train on at most so many episodes (default: all)")
     parser.add_argument("--operator", action="append", default=[], help="only this operator's; may be repeated")
+    parser.add_argument("--set", metavar="NAME", help="train on a saved training set (nearhand curate --save-set)")
     parser.add_argument("--seed", type=int, help="seed, instead of the recipe's")
     parser.add_argument(
         "--cost-of", type=int, metavar="VERSION", help="show what a version's recovered cost charges for; starts no job"
@@ -138,6 +139,8 @@ def run(options: argparse.Namespace) -> int:
             if options.seed is not None:
                 recipe["seed"] = options.seed
             wishes: dict[str, Any] = {"recipe": recipe, "episodes": options.episodes, "operators": options.operator}
+            if options.set is not None:
+                wishes["set"] = options.set
             if options.from_cost is not None:
                 wishes |= {"from_version": options.from_cost, "simulator": changes(options.simulator)}
             rig = known_rig(desk, options.rig)

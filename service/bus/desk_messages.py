@@ -6,6 +6,14 @@ from typing import ClassVar, Literal
 
 from pydantic import Field, FiniteFloat
 
+from nearhand.service.bus.curation_messages import (
+    Curate,
+    CurationReply,
+    ListCuration,
+    ListSets,
+    SaveSet,
+    SetsReply,
+)
 from nearhand.service.bus.desk_request import Deed, DeskReply, DeskRequest
 from nearhand.service.bus.message import Count, ErrorReply, Identifier, Label, Table, Text, kinds
 from nearhand.service.bus.shadow_messages import GetShadow, ShadowReply, StartShadow, StopShadow
@@ -103,7 +111,8 @@ class StartJob(Deed):
     """Queue a job.
 
     ``options`` by job kind. ``distil``: recipe (a map, see recipes), operators (list, empty for all), episodes (how
-    many training episodes at most, 0 for all). ``measure``: version, closed_loop_episodes, seed, operators, against
+    many training episodes at most, 0 for all),
+    set (a training set's name, empty for none). ``measure``: version, closed_loop_episodes, seed, operators, against
     (a version, 0 for none). ``inspect``: none.
     """
 
@@ -314,10 +323,10 @@ class HealthReply(DeskReply):
 DESK_REQUESTS = kinds(
     Where, PutRig, GetRig, ListRigs, ListEpisodes, GetEpisode, StartJob, GetJob, CancelJob, ListJobs, ListVersions,
     GetVersion, Release, Rollback, StandDown, Rearm, Halt, ListEvents, VerifyEvents, GetHealth,
-    StartShadow, StopShadow, GetShadow, GetPlan,
+    StartShadow, StopShadow, GetShadow, GetPlan, Curate, ListCuration, SaveSet, ListSets,
 )  # fmt: skip
 DESK_REPLIES = kinds(
     WhereReply, RigReply, RigsReply, EpisodesReply, EpisodeReply, JobReply, JobsReply, VersionsReply, VersionReply,
     ReleaseReply, RigStateReply, EventsReply, VerifyReply, HealthReply, ShadowReply, PlanReply,
-    ErrorReply,
+    CurationReply, SetsReply, ErrorReply,
 )  # fmt: skip

@@ -10,14 +10,23 @@ from nearhand.service.bus.desk_messages import DESK_REQUESTS
 from nearhand.service.bus.desk_request import DeskRequest
 from nearhand.service.bus.message import Message
 from nearhand.service.errors import NearhandError
-from nearhand.service.keeper import episode_room, job_room, record_room, rig_room, shadow_room, version_room
+from nearhand.service.keeper import (
+    curation_room,
+    episode_room,
+    job_room,
+    record_room,
+    rig_room,
+    shadow_room,
+    version_room,
+)
 from nearhand.service.keeper.lane import Lane, Request, error_reply
 from nearhand.service.keeper.ledger import log_line
 from nearhand.service.keeper.office import Office, Room
 
 MAX_AT_ONCE = 16
 ROOMS: Room = {
-    **rig_room.ROOM, **episode_room.ROOM, **job_room.ROOM, **version_room.ROOM, **shadow_room.ROOM, **record_room.ROOM,
+    **rig_room.ROOM, **episode_room.ROOM, **curation_room.ROOM, **job_room.ROOM, **version_room.ROOM,
+    **shadow_room.ROOM, **record_room.ROOM,
 }  # fmt: skip
 
 

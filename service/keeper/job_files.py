@@ -6,11 +6,13 @@ import contextlib
 import hashlib
 import shutil
 import traceback
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
 from nearhand.service.episodes.correction import Correction, as_fragment
+from nearhand.service.episodes.curation import Decision, apply
 from nearhand.service.episodes.episode import Episode
 from nearhand.service.errors import ConflictError, NearhandError, PolicyFormatError, StoreError
 from nearhand.service.jobs.folder import JobFolder
@@ -51,7 +53,8 @@ def write_job(store: Store, job: JobRow, folder: JobFolder, progress: str) -> No
     rows = chosen_episodes(store, job)
     options = dict(job.options)
     try:
-        folder.write_episodes(_episodes(store, job, rows))
+        decided = decisions(store, job)
+        folder.write_episodes(_episodes(store, job, rows, rig.rig, decided))
         if job.kind == "measure":
             options.update(_write_inputs(store, job, folder))
         if job.kind == "distil" and job.options.get("from_version"):
@@ -62,7 +65,7 @@ def write_job(store: Store, job: JobRow, folder: JobFolder, progress: str) -> No
             "rig": rig.rig.model_dump(mode="json"),
             "options": options,
             "progress": progress,
-            "given": _given(rows),
+            "given": _given(rows, decided) | _set_given(store, job),
         }
         folder.write_json("job.json", content)
     except OSError as error:
@@ -79,6 +82,15 @@ def chosen_episodes(store: Store, job: JobRow) -> list[EpisodeRow]:
     rows = store.episodes.closed(
         job.rig, splits=SPLITS[job.kind], operators=operators, finite_only=job.kind != "inspect"
     )
+    if job.kind != "inspect":
+        decided = decisions(store, job)
+        wanted = _set_names(store, job)
+        rows = [
+            row
+            for row in rows
+            if not decided.get(row.episode, Decision()).excluded
+            and (wanted is None or row.split != "train" or row.episode in wanted)
+        ]
     needed = {"distil": "train", "measure": "held-out"}.get(job.kind)
     if not any(needed in (None, row.split) for row in rows):
         by = f" by {', '.join(operators)}" if operators else ""
@@ -90,22 +102,72 @@ def chosen_episodes(store: Store, job: JobRow) -> list[EpisodeRow]:
     return rows
 
 
-def _episodes(store: Store, job: JobRow, rows: Sequence[EpisodeRow]) -> list[Episode]:
-    """Return the episodes' samples; corrections lose their transient, except where they are inspected as they came."""
+def _set_names(store: Store, job: JobRow) -> frozenset[str] | None:
+    """Return the episodes of the training set that a distillation was told to use, or None."""
+    name = str(job.options.get("set") or "") if job.kind == "distil" else ""
+    if not name:
+        return None
+    store.curation.get_set(job.rig, name)
+    return frozenset(item.episode for item in store.curation.members(job.rig, name))
+
+
+def decisions(store: Store, job: JobRow) -> dict[str, Decision]:
+    """Return what is decided about the episodes of a job: a training set's own decisions come before today's.
+
+    Raises:
+        UnknownNameError: there is no such training set.
+    """
+    if job.kind == "inspect":
+        return {}
+    decided = store.curation.of_rig(job.rig)
+    if _set_names(store, job) is not None:
+        decided |= {item.episode: item.decision for item in store.curation.members(job.rig, str(job.options["set"]))}
+    return decided
+
+
+def _set_given(store: Store, job: JobRow) -> dict[str, Any]:
+    """Return the training set's name and digest, for the provenance.
+
+    Raises:
+        StoreError: a member's samples are not those that were saved.
+    """
+    if _set_names(store, job) is None:
+        return {}
+    row = store.curation.get_set(job.rig, str(job.options["set"]))
+    for item in store.curation.members(job.rig, row.name):
+        if store.curation.content_digest(store.episodes.get(item.episode)) != item.sha256:
+            raise StoreError(
+                f"training set {row.name}: episode {item.episode} does not have its recorded SHA-256; restore a backup",
+                code="store.damaged",
+            )
+    return {"set": {"name": row.name, "sha256": row.sha256}}
+
+
+def _episodes(
+    store: Store, job: JobRow, rows: Sequence[EpisodeRow], rig: Rig, decided: Mapping[str, Decision]
+) -> list[Episode]:
+    """Return the samples, trimmed and weighted, corrections without their transient; inspected as they came."""
     found: list[Episode] = []
     for row in rows:
         episode: Episode | None = store.episodes.load(row)
+        if episode is not None and job.kind != "inspect":
+            episode = apply(decided.get(row.episode, Decision()), episode, rig)
         correction = Correction.of(row.task, row.notes)
         if episode is not None and correction is not None and job.kind != "inspect":
-            episode = as_fragment(episode, correction)
+            left_s = max(correction.transient_s - decided.get(row.episode, Decision()).start_s, 0.0)
+            episode = as_fragment(episode, replace(correction, transient_s=left_s))
         if episode is not None:
             found.append(episode)
     return found
 
 
-def _given(rows: Sequence[EpisodeRow]) -> dict[str, Any]:
+def _given(rows: Sequence[EpisodeRow], decided: Mapping[str, Decision]) -> dict[str, Any]:
     """Return which demonstrations a job was given, and a digest over them."""
-    listing = [[row.episode, row.operator, row.split, row.samples, row.rig_digest] for row in rows]
+    listing = [
+        [row.episode, row.operator, row.split, row.samples, row.rig_digest]
+        + ([item.start_s, item.end_s, item.weight] if (item := decided.get(row.episode)) is not None else [])
+        for row in rows
+    ]
     counts: dict[str, int] = {}
     for row in rows:
         counts[str(row.split)] = counts.get(str(row.split), 0) + 1

@@ -63,6 +63,8 @@ def _check_options(kind: str, options: Mapping[str, Any]) -> None:
     operators = options.get("operators", ())
     if not isinstance(operators, tuple | list) or not all(isinstance(name, str) for name in operators):
         raise ConfigError(f"{kind}: operators = {operators!r} must be a list of names", code="config.options")
+    if not isinstance(options.get("set", ""), str):
+        raise ConfigError(f"{kind}: set must be the name of a training set", code="config.options")
     if kind == "distil":
         recipe = options.get("recipe", {})
         if not isinstance(recipe, Mapping):

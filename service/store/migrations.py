@@ -10,6 +10,7 @@ from nearhand.service.errors import StoreError
 from nearhand.service.store.database import Database
 from nearhand.service.store.schema_1 import SCHEMA_1
 from nearhand.service.store.schema_2 import SCHEMA_2
+from nearhand.service.store.schema_3 import SCHEMA_3
 
 
 @dataclass(frozen=True, slots=True)
@@ -21,7 +22,11 @@ class Migration:
     statements: tuple[str, ...]
 
 
-MIGRATIONS: tuple[Migration, ...] = (Migration(1, "first schema", SCHEMA_1), Migration(2, "shadows", SCHEMA_2))
+MIGRATIONS: tuple[Migration, ...] = (
+    Migration(1, "first schema", SCHEMA_1),
+    Migration(2, "shadows", SCHEMA_2),
+    Migration(3, "curation", SCHEMA_3),
+)
 
 _RECORD = """
 CREATE TABLE IF NOT EXISTS migrations (

@@ -5,6 +5,7 @@ from __future__ import annotations
 from pathlib import Path
 
 from nearhand.service.errors import StoreError
+from nearhand.service.store.curation import Curation
 from nearhand.service.store.database import Database
 from nearhand.service.store.episodes import Episodes
 from nearhand.service.store.events import Events
@@ -36,6 +37,7 @@ class Store:
             raise
         self.rigs = Rigs(self.database)
         self.episodes = Episodes(self.database)
+        self.curation = Curation(self.database)
         self.versions = Versions(self.database)
         self.jobs = Jobs(self.database)
         self.releases = Releases(self.database)
