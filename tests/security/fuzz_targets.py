@@ -251,7 +251,6 @@ class KeeperHere:
     """A keeper in this process whose writing is thrown away from time to time."""
 
     def __init__(self) -> None:
-        action_server.ANSWER_TIMEOUT_S = 0.0  # nobody is there to answer
         self.folder = _folder()
         settings = ServiceSettings(data=self.folder / "data", **{lane: f"ipc://{self.folder / lane}" for lane in LANES})
         self.keeper = Keeper(settings)
@@ -274,8 +273,12 @@ class KeeperHere:
             self._undo = self.keeper.store.database.atomic()
             self._undo.__enter__()
         log = io.StringIO()
-        with contextlib.redirect_stderr(log):
-            reply = answer(frame)
+        patience_s, action_server.ANSWER_TIMEOUT_S = action_server.ANSWER_TIMEOUT_S, 0.0  # nobody is there to answer
+        try:
+            with contextlib.redirect_stderr(log):
+                reply = answer(frame)
+        finally:
+            action_server.ANSWER_TIMEOUT_S = patience_s
         assert "defect" not in log.getvalue(), log.getvalue()
         self._fed += 1
         if self._fed % FORGET_AFTER == 0:

@@ -224,12 +224,12 @@ def test_a_damaged_table_lets_in_nobody_until_it_is_put_right(
     service: ServiceProcess, chief: ClientKey, folder: KeyFolder
 ) -> None:
     text = folder.table_file.read_text()
-    with Desk(service.lanes["desk"], 1.0, key=chief) as desk, Desk(service.lanes["desk"], 3.0, key=chief) as newcomer:
+    with Desk(service.lanes["desk"], 10.0, key=chief) as desk, Desk(service.lanes["desk"], key=chief) as newcomer:
         assert outcome(desk, messages.Where, messages.WhereReply) == "done"
         folder.table_file.write_text("[[key]]\nname = ")
-        wait_for(lambda: outcome(desk, messages.Where, messages.WhereReply) == "refused.key", "the damage", 2.0)
+        wait_for(lambda: outcome(desk, messages.Where, messages.WhereReply) == "refused.key", "the damage")
         folder.table_file.write_text(text)
-        wait_for(lambda: outcome(desk, messages.Where, messages.WhereReply) == "done", "the repair", 3.0)
+        wait_for(lambda: outcome(desk, messages.Where, messages.WhereReply) == "done", "the repair")
         assert outcome(newcomer, messages.Where, messages.WhereReply) == "done", "it has gone on trying"
 
 
