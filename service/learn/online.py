@@ -14,6 +14,7 @@ from nearhand.service.errors import LearningError
 from nearhand.service.learn.cloning import Actor
 from nearhand.service.learn.critic import Coefficients, QuadraticCritic
 from nearhand.service.learn.demonstrations import Demonstration, stack_pairs
+from nearhand.service.learn.diagnostics import dual_gap, excitation, start_free_share
 from nearhand.service.learn.features import CostFeatures, Float64, discounted_means
 from nearhand.service.learn.improvement import (
     Anchor,
@@ -143,9 +144,15 @@ class OnlineProximalPoint:
         """The present policy."""
         return Actor(self.clone.layers, self.progress.actor.values.detach(), self.progress.log_sd)
 
-    def floor(self, rollouts: int) -> float:
-        """Return the distance that as many fresh episodes of the expert would have; NaN from one demonstration."""
-        return float(np.sqrt(self._expert_trace * (1 / len(self.scene.demonstrations) + 1 / rollouts)))
+    def floor(self, rollouts: Rollouts) -> float:
+        """Return the distance of as many episodes of the expert, started alike; NaN from one demonstration."""
+        scene = self.scene
+        rows = [replace(rollouts, shares=np.eye(len(rollouts.lengths))[i]) for i in range(len(rollouts.lengths))]
+        each = np.stack([mean_features(scene.features, row, scene.discount) for row in rows])
+        starts = rollouts.windows[:, 0, : scene.features.n].astype(np.float64)
+        free = start_free_share(each, starts, rollouts.shares)
+        spread = np.square(self._share).sum() + np.square(rollouts.shares).sum()
+        return float(np.sqrt(self._expert_trace * free * spread))
 
     def evaluate(self, rollouts: Rollouts, reference: Actor) -> tuple[dict[str, float], Evaluated]:
         scene, recipe, state = self.scene, self.recipe, self.progress
@@ -165,7 +172,7 @@ class OnlineProximalPoint:
             if state.iteration > 0:
                 setting = Setting(1.0, alpha, scene.discount, variance, setting.expert)
                 delta, _, at = residuals(self.critic, critic, cost, absorbing[0], sample, setting)
-        value = float("nan")
+        value, before = float("nan"), critic.detach().clone()
         for step in range(recipe.inner_steps if state.iteration else max(recipe.first_inner_steps, recipe.inner_steps)):
             if step % 10 == 0:
                 eta, _ = tilting_strength(sample.log_weight, delta.detach(), recipe.ess_floor)
@@ -192,6 +199,10 @@ class OnlineProximalPoint:
             "objective": value,
             "gradient_cost": float(torch.linalg.vector_norm(gradients[1])),
             "gradient_critic": float(torch.linalg.vector_norm(gradients[0])),
+            "dual_gap": dual_gap(
+                cost.detach(), gradients[1], gradients[0], float(torch.linalg.vector_norm(critic.detach() - before))
+            ),
+            "excitation": excitation(sample.features, sample.log_weight),
             "ess": share,
             "delta_sd": spread,
             "eta": setting.eta,
@@ -257,12 +268,15 @@ class OnlineProximalPoint:
             figures |= self._improve(evaluated, reference)
         if figures["ess"] < recipe.ess_floor / 2:
             state.caution *= 0.7
-            message = message or f"effective samples fell to {figures['ess']:.2f}; steps are made smaller"
+            message = message or (
+                f"the effective sample size fell to {figures['ess']:.0%}: few transitions carry the evaluation; "
+                f"from here on the steps are {state.caution:.2f} of the planned ones"
+            )
         state.steps += rollouts.steps
         state.iteration += 1
         figures |= {
             "feature_distance": distance,
-            "floor": self.floor(recipe.episodes),
+            "floor": self.floor(rollouts),
             "action_sd": float(np.exp(state.log_sd).mean()),
             "steps_per_s": rollouts.steps / max(time.monotonic() - began_s, 1e-9),
         }
@@ -270,6 +284,8 @@ class OnlineProximalPoint:
             state.curves.setdefault(name, []).append(value)
         if message:
             state.messages.append(f"iteration {state.iteration}: {message}")
+        # Told, not kept: what depends on the clock has no place among the curves.
+        figures["remaining_s"] = (recipe.iterations - state.iteration) * (time.monotonic() - began_s)
         return figures, message
 
     def _keep_or_return(self, distance: float, reference: Actor) -> str:

@@ -86,7 +86,8 @@ def test_job_writes_two_readable_policies_with_gate_provenance_and_curves(
         assert provenance["simulator_steps"] >= (4 * 6 + 5 * 6) * 40
     curves = result["result"]["curves"]
     wanted = {
-        "objective", "gradient_cost", "gradient_critic", "ess", "kl_step", "delta_sd", "eta", "alpha",
+        "objective", "gradient_cost", "gradient_critic", "dual_gap", "excitation", "ess", "kl_step", "delta_sd",
+        "eta", "alpha",
         "feature_distance", "floor", "improvement_kl", "action_sd", "steps_per_s",
     }  # fmt: skip
     assert wanted <= set(curves)
