@@ -12,12 +12,15 @@ from nearhand.service.errors import ConfigError
 #: Benchmark → module with ``run(**options) -> dict`` (bench, figures, ratios, targets).
 BENCHES = {
     "action-latency": "nearhand.client.bench_action",
+    "changed-dynamics": "nearhand.service.learn.comparison.bench_changed",
     "curve-cost": "nearhand.client.bench_curve",
     "many-rigs": "nearhand.client.bench_rigs",
+    "corrections": "nearhand.client.bench_corrections",
     "endurance": "nearhand.client.faults.endurance",
     "faults": "nearhand.client.faults.campaign",
     "gate": "nearhand.client.bench_gate",
     "learning": "nearhand.client.bench_learning",
+    "mixed-demonstrators": "nearhand.service.learn.comparison.bench_mixed",
     "novelty": "nearhand.client.bench_novelty",
 }
 #: What may be told to a benchmark that takes it.
