@@ -35,7 +35,16 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--operator", help="name to record (default: the expert's)")
     parser.add_argument("--episodes", type=int, default=24, help="how many (default: %(default)s)")
     parser.add_argument("--seed", type=int, default=1, help="seed of the start states (default: %(default)s)")
-    parser.add_argument("--from", dest="source", type=Path, metavar="FILE", help="import a CSV file instead")
+    parser.add_argument(
+        "--from",
+        dest="source",
+        type=Path,
+        metavar="FILE",
+        help="import a CSV file, or all .csv files of a folder, instead",
+    )
+    parser.add_argument(
+        "--map", type=Path, metavar="FILE", help="with --from: a TOML file that renames and converts columns"
+    )
     parser.add_argument("--spool", type=Path, help="folder for what is not acknowledged yet (default: a temporary one)")
 
 
@@ -43,6 +52,8 @@ def run(options: argparse.Namespace) -> int:
     """Run ``collect``; exit status 1 unless everything sent was acknowledged."""
     if options.episodes < 1:
         raise ConfigError(f"--episodes = {options.episodes}; expected at least 1")
+    if options.map and not options.source:
+        raise ConfigError("--map needs --from FILE", code="config.option")
     with open_desk(options) as desk, tempfile.TemporaryDirectory(prefix="nearhand-") as folder:
         rig, source = _settle_rig(desk, options, Path(folder))
         intake = desk.lanes().intake
@@ -103,13 +114,19 @@ def _console() -> Any:
 
 
 def _imported(rig: Rig, options: argparse.Namespace, intake: str, spool: Path) -> list[dict[str, Any]]:
-    from nearhand.service.episodes.tables import read_csv
+    from nearhand.service.episodes.mapping import read_map
+    from nearhand.service.episodes.tables import NO_MAP, read_csv
 
-    episodes = read_csv(options.source, rig)
+    mapping = read_map(options.map) if options.map else NO_MAP
+    files = sorted(options.source.glob("*.csv")) if options.source.is_dir() else [options.source]
+    if not files:
+        raise ConfigError(f"folder {options.source} holds no .csv file; nothing was imported", code="config.csv")
+    # All are read before the first sample is sent: a bad row in the last file imports nothing.
+    episodes = [(file, episode) for file in files for episode in read_csv(file, rig, mapping)]
     with DemonstrationStream(rig, intake, spool) as stream:
-        for episode in episodes:
+        for file, episode in episodes:
             recording = stream.open(
-                options.operator or episode.operator or "imported", notes=f"imported from {options.source.name}"
+                options.operator or episode.operator or "imported", notes=f"imported from {file.name}"
             )
             for row, time_s in enumerate(episode.times_s):
                 recording.add(float(time_s), episode.observations[row], episode.actions[row])

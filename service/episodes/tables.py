@@ -19,11 +19,13 @@ import numpy as np
 
 from nearhand.service.bus.intake_messages import Outcome
 from nearhand.service.episodes.episode import Episode
+from nearhand.service.episodes.mapping import TableMap
 from nearhand.service.errors import ConfigError
 from nearhand.service.rigs import Channel, Rig
 
 EPISODE, TIME, OPERATOR, OUTCOME = "episode", "t_s", "operator", "outcome"
 SEPARATORS = ",;\t"
+NO_MAP = TableMap()
 #: From here on a number rounds to infinity in float32 (IEEE 754).
 FLOAT32_BEYOND = (2 - 2.0**-24) * 2.0**127
 
@@ -44,8 +46,9 @@ class _Rows:
 class _Table:
     """A CSV text being read, with its columns found."""
 
-    def __init__(self, lines: Iterable[str], rig: Rig, origin: str) -> None:
+    def __init__(self, lines: Iterable[str], rig: Rig, origin: str, mapping: TableMap) -> None:
         self._origin = origin
+        self._mapped = mapping.columns
         self._rig = rig
         source = iter(lines)
         first = next(source, "")
@@ -64,11 +67,24 @@ class _Table:
     def _find(self, header: Sequence[str]) -> dict[str, int]:
         """Return the place of each wanted column by name, units checked."""
         units = {channel.name: channel.unit for channel in (*self._rig.observations, *self._rig.actions)}
+        wanted = {*units, EPISODE, TIME, OPERATOR, OUTCOME}
+        unknown = [name for name in self._mapped if name not in wanted]
+        if unknown:
+            raise ConfigError(
+                f"the mapping names {', '.join(unknown)}; rig {self._rig.name} has the columns {', '.join(wanted)}",
+                code="config.map",
+            )
+        titles = {column.title: name for name, column in self._mapped.items()}
         found: dict[str, int] = {}
         for place, cell in enumerate(header):
+            if cell in titles:
+                if titles[cell] in found:
+                    raise self._wrong(1, f"column {cell!r} is there twice")
+                found[titles[cell]] = place
+                continue
             name, bracket, rest = cell.partition("[")
             name = name.strip()
-            if name not in units and name not in (EPISODE, TIME, OPERATOR, OUTCOME):
+            if name not in wanted or name in self._mapped:
                 continue
             if name in found:
                 raise self._wrong(1, f"column {name!r} is there twice")
@@ -111,6 +127,8 @@ class _Table:
             value = float(cell)
         except ValueError:
             value = math.nan
+        if name in self._mapped:
+            value = self._mapped[name].convert(value)
         if not math.isfinite(value) or abs(value) >= below:
             raise self._wrong(line, f"column {name!r} holds {cell!r}; expected a finite number")
         return value
@@ -175,7 +193,7 @@ def _chained(first: str, rest: Iterator[str]) -> Iterator[str]:
     yield from rest
 
 
-def parse_csv(text: Iterable[str], rig: Rig, *, origin: str = "the table") -> list[Episode]:
+def parse_csv(text: Iterable[str], rig: Rig, *, origin: str = "the table", mapping: TableMap = NO_MAP) -> list[Episode]:
     """Return the episodes in CSV lines.
 
     The last row of each episode supplies the observation after its last action; its action cells may be empty.
@@ -183,10 +201,10 @@ def parse_csv(text: Iterable[str], rig: Rig, *, origin: str = "the table") -> li
     Raises:
         ConfigError: a column or row cannot be used; the message names line and column.
     """
-    return _Table(text, rig, origin).read()
+    return _Table(text, rig, origin, mapping).read()
 
 
-def read_csv(path: Path, rig: Rig) -> list[Episode]:
+def read_csv(path: Path, rig: Rig, mapping: TableMap = NO_MAP) -> list[Episode]:
     """Return the episodes in a CSV file, all or none.
 
     Raises:
@@ -194,7 +212,7 @@ def read_csv(path: Path, rig: Rig) -> list[Episode]:
     """
     try:
         with path.open(encoding="utf-8-sig", newline="") as stream:
-            return parse_csv(stream, rig, origin=str(path))
+            return parse_csv(stream, rig, origin=str(path), mapping=mapping)
     except (OSError, UnicodeDecodeError) as error:
         raise ConfigError(f"cannot read {path}: {error}; expected a CSV file in UTF-8", code="config.csv") from error
 

@@ -6,7 +6,6 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.signal import lfilter
 
 #: An interval longer than this many periods is a gap: samples are missing.
 GAP_PERIODS = 3.0
@@ -41,6 +40,8 @@ def interarrival_jitter(sent_s: NDArray[np.float64], received_s: NDArray[np.floa
 
     Source: RFC 3550, section 6.4.1.
     """
+    from scipy.signal import lfilter  # here, so that the keeper, which needs GAP_PERIODS, does not load SciPy
+
     deviation = np.abs(np.diff(received_s) - np.diff(sent_s))
     return np.asarray(lfilter([RFC_GAIN], [1.0, RFC_GAIN - 1.0], deviation))
 

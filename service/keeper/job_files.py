@@ -14,6 +14,7 @@ from typing import Any
 from nearhand.service.episodes.correction import Correction, as_fragment
 from nearhand.service.episodes.curation import Decision, apply
 from nearhand.service.episodes.episode import Episode
+from nearhand.service.episodes.resampling import regular_stretches
 from nearhand.service.errors import ConflictError, NearhandError, PolicyFormatError, StoreError
 from nearhand.service.jobs.folder import JobFolder
 from nearhand.service.keeper.ledger import Ledger, log_line
@@ -157,13 +158,14 @@ def _episodes(
             left_s = max(correction.transient_s - decided.get(row.episode, Decision()).start_s, 0.0)
             episode = as_fragment(episode, replace(correction, transient_s=left_s))
         if episode is not None:
-            found.append(episode)
+            is_raw = job.kind == "inspect"
+            found.extend([episode] if is_raw else regular_stretches(episode, rig.timing.period_s))
     return found
 
 
 def _given(rows: Sequence[EpisodeRow], decided: Mapping[str, Decision]) -> dict[str, Any]:
     """Return which demonstrations a job was given, and a digest over them."""
-    listing = [
+    listing: list[list[Any]] = [
         [row.episode, row.operator, row.split, row.samples, row.rig_digest]
         + ([item.start_s, item.end_s, item.weight] if (item := decided.get(row.episode)) is not None else [])
         for row in rows

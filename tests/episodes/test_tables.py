@@ -11,6 +11,7 @@ from hypothesis import strategies as st
 from hypothesis.extra import numpy as hnp
 
 from nearhand.service.episodes.episode import Episode
+from nearhand.service.episodes.mapping import TableMap, read_map
 from nearhand.service.episodes.tables import csv_text, parse_csv, read_csv
 from nearhand.service.errors import ConfigError
 from nearhand.service.rigs import Rig
@@ -122,3 +123,30 @@ def test_what_is_written_reads_back_bit_for_bit(data: st.DataObject, length: int
     assert read.times_s.tobytes() == episode.times_s.tobytes()
     assert read.observations.tobytes() == episode.observations.tobytes()
     assert read.actions.tobytes() == episode.actions.tobytes()
+
+
+def test_a_mapping_renames_and_converts(rig: Rig, tmp_path: Path) -> None:
+    path = tmp_path / "map.toml"
+    path.write_text(
+        '[columns.position]\nfrom = "Trolley X [mm]"\nfactor = 0.001\noffset = 1.0\n'
+        '[columns.t_s]\nfrom = "ms"\nfactor = 0.001\n[columns.episode]\nfrom = "run"\n'
+    )
+    rows = lines("run,ms,Trolley X [mm],position,speed,angle,push", "a,0,250,9,0,0,1", "a,20,500,9,0,0,")
+    (episode,) = parse_csv(rows, rig, mapping=read_map(path))
+    np.testing.assert_array_equal(episode.observations[:, 0], np.array([1.25, 1.5], dtype=np.float32))
+    assert episode.times_s.tolist() == [0.0]
+    with pytest.raises(ConfigError, match="line 2: column 'position'"):
+        parse_csv([rows[0], "a,0,x,9,0,0,1\n", rows[2]], rig, mapping=read_map(path))
+
+
+def test_a_mapping_that_cannot_be_used_is_refused(rig: Rig, tmp_path: Path) -> None:
+    unknown = TableMap.model_validate({"columns": {"altitude": {"from": "z"}}})
+    with pytest.raises(ConfigError, match="altitude"):
+        parse_csv(lines(HEADER, FIRST, LAST), rig, mapping=unknown)
+    path = tmp_path / "map.toml"
+    for text in ("[columns.position]\nform = 'x'\n", "[columns", "[columns.position]\nfrom = 'x'\nfactor = nan\n"):
+        path.write_text(text)
+        with pytest.raises(ConfigError):
+            read_map(path)
+    with pytest.raises(ConfigError, match="cannot read the mapping"):
+        read_map(tmp_path / "absent.toml")
