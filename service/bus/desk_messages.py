@@ -111,9 +111,9 @@ class StartJob(Deed):
     """Queue a job.
 
     ``options`` by job kind. ``distil``: recipe (a map, see recipes), operators (list, empty for all), episodes (how
-    many training episodes at most, 0 for all),
-    set (a training set's name, empty for none). ``measure``: version, closed_loop_episodes, seed, operators, against
-    (a version, 0 for none). ``inspect``: none.
+    many training episodes at most, 0 for all), set (a training set's name, empty for none), from_version (teach from
+    that version's recovered cost alone, 0 for no), simulator (a map of simulator options to replace then).
+    ``measure``: version, closed_loop_episodes, seed, operators, against (a version, 0 for none). ``inspect``: none.
     """
 
     role: ClassVar[str] = "teach"

@@ -12,7 +12,7 @@ from nearhand.service.episodes.episode import Episode
 def episode(length: int = 50, period_s: float = 0.02, begin_s: float = 1e6) -> Episode:
     """Return an episode whose values are its row numbers."""
     rows = np.arange(length + 1, dtype=np.float32)[:, None]
-    return Episode("e", "rig", "Ada", begin_s + period_s * np.arange(length), rows, rows[:-1])
+    return Episode("e", "rig", "Ada", (begin_s + period_s * np.arange(length)).astype(np.float64), rows, rows[:-1])
 
 
 @pytest.mark.parametrize(("transient_s", "first"), [(0.0, 0), (0.01, 1), (0.4, 20), (0.98, 49)])
