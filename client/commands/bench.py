@@ -19,6 +19,7 @@ BENCHES = {
     "endurance": "nearhand.client.faults.endurance",
     "faults": "nearhand.client.faults.campaign",
     "gate": "nearhand.client.bench_gate",
+    "intake": "nearhand.client.bench_intake",
     "learning": "nearhand.client.bench_learning",
     "mixed-demonstrators": "nearhand.service.learn.comparison.bench_mixed",
     "novelty": "nearhand.client.bench_novelty",
