@@ -36,16 +36,17 @@ class FallbackAction:
     def __init__(self, limits: Limits) -> None:
         self._limits = limits
         self._speeds = [0.0] * len(limits.axes)
-        self._speeds_ns: int | None = None
+        self._speeds_ns: list[int | None] = [None] * len(limits.axes)
         self._since_ns: int | None = None
         self._begun_speeds, self._reckoned = list(self._speeds), list(self._speeds)
         self._reckoned_ns = 0
 
     def see(self, observation: Sequence[float] | NDArray[np.floating], now_ns: int) -> None:
-        """Note the axes' speeds from a finite observation (n,)."""
-        self._speeds_ns = now_ns
+        """Note the axes' speeds from a finite observation (n,); a reading that can be no speed is left out."""
         for index, axis in enumerate(self._limits.axes):
-            self._speeds[index] = float(observation[axis.velocity])
+            speed = float(observation[axis.velocity])
+            if -axis.fastest <= speed <= axis.fastest:
+                self._speeds[index], self._speeds_ns[index] = speed, now_ns
 
     def end(self) -> None:
         """The fallback no longer acts; the next time it begins anew."""
@@ -95,15 +96,18 @@ class FallbackAction:
         axis, speed = self._limits.axes[index], self._speeds[index]
         expected = self._reckoned[index] - self._begun_speeds[index]
         doubtful = abs(expected) > axis.deceleration * DOUBT * (self._limits.period_s + axis.reaction_s)
-        if axis.accelerates and doubtful and abs(speed - self._begun_speeds[index]) < ANSWER * abs(expected):
+        # The answer must also go the same way: a sensor that reads more the longer one brakes is not to be followed.
+        answer = (speed - self._begun_speeds[index]) * np.sign(expected)
+        if axis.accelerates and doubtful and answer < ANSWER * abs(expected):
             return self._reckoned[index]
         return speed
 
     def _estimate(self, previous: Float32, now_ns: int) -> None:
         """Advance the accelerated axes' speeds to now."""
-        if self._speeds_ns is not None and now_ns > self._speeds_ns:
-            passed_s = min((now_ns - self._speeds_ns) * 1e-9, LONGEST_ESTIMATE_S)
-            for index, axis in enumerate(self._limits.axes):
+        for index, axis in enumerate(self._limits.axes):
+            since_ns = self._speeds_ns[index]
+            if since_ns is not None and now_ns > since_ns:
+                passed_s = min((now_ns - since_ns) * 1e-9, LONGEST_ESTIMATE_S)
                 if axis.accelerates:
                     self._speeds[index] += float(previous[axis.action]) * passed_s
-            self._speeds_ns = now_ns
+                self._speeds_ns[index] = now_ns

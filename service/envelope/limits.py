@@ -15,11 +15,16 @@ Float32 = NDArray[np.float32]
 LARGEST = 1e37
 #: A change by less than this fraction of the range is rounding, not an intervention.
 ROUNDING = 1e-6
+#: A speed beyond so many times its declared range is a sensor's fault.
+BELIEVABLE = 1.5
 
 
 @dataclass(frozen=True, slots=True)
 class Axis:
-    """One braking axis, by channel index; see :class:`nearhand.service.rigs.Braking` for units."""
+    """One braking axis, by channel index; see :class:`nearhand.service.rigs.Braking` for units.
+
+    ``fastest`` is half as much again as the declared range of its velocity: a reading beyond is no speed.
+    """
 
     position: int
     velocity: int
@@ -29,6 +34,7 @@ class Axis:
     high: float
     deceleration: float
     reaction_s: float
+    fastest: float = float("inf")
 
 
 @dataclass(frozen=True, slots=True)
@@ -77,6 +83,8 @@ class Limits:
             Axis(
                 observed.index(axis.position), observed.index(axis.velocity), acted.index(axis.action),
                 axis.drives == "acceleration", axis.low, axis.high, axis.deceleration, axis.reaction_s,
+                BELIEVABLE * max(abs(rig.observations[observed.index(axis.velocity)].low),
+                                 abs(rig.observations[observed.index(axis.velocity)].high)),
             )
             for axis in rig.braking
         )  # fmt: skip

@@ -108,3 +108,34 @@ def test_it_comes_to_rest_though_the_drive_is_weak_or_the_speed_is_stuck(
         true += gain * float(action[axis.action]) * 1e-9 * PERIOD_NS
         lowest = min(lowest, true * np.sign(speed))
     assert abs(true) < residue and lowest > -residue
+
+
+@pytest.mark.parametrize("factor", [-5.0, 5.0, 30.0])
+def test_a_reading_that_can_be_no_speed_does_not_set_the_machine_moving(rig_with: RigWith, factor: float) -> None:
+    limits = Limits.of(rig_with(fallback={"kind": "ramp", "ramp_per_s": 2.0}))
+    (axis,) = limits.axes
+    fallback = FallbackAction(limits)
+    action, true = limits.rest.copy(), 0.3
+    for period in range(1000):
+        observed = np.zeros(8)
+        observed[axis.velocity] = true if period < 5 else factor * (abs(true) + 1.0)
+        fallback.see(observed, period * PERIOD_NS)
+        if period >= 5:
+            action = fallback.act(action, period * PERIOD_NS)
+        true += float(action[axis.action]) * 1e-9 * PERIOD_NS
+        assert -0.1 < true < 0.31
+    assert abs(true) < 0.1
+
+
+def test_a_speed_that_grows_by_braking_is_not_followed(rig_with: RigWith) -> None:
+    limits = Limits.of(rig_with(fallback={"kind": "ramp", "ramp_per_s": 2.0}))
+    (axis,) = limits.axes
+    fallback = FallbackAction(limits)
+    action, true = limits.rest.copy(), 0.5
+    for period in range(1000):
+        observed = np.zeros(8)
+        observed[axis.velocity] = min(0.5 + 1.2 * (0.5 - true), 2.0)
+        fallback.see(observed, period * PERIOD_NS)
+        action = fallback.act(action, period * PERIOD_NS)
+        true += float(action[axis.action]) * 1e-9 * PERIOD_NS
+    assert abs(true) < 0.1
