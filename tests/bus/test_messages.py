@@ -46,7 +46,6 @@ plain = st.recursive(
 table = st.dictionaries(st.text(max_size=6), plain, max_size=4)
 identifier = st.from_regex(r"[A-Za-z0-9][A-Za-z0-9._-]{0,63}", fullmatch=True)
 count = st.integers(0, 2**63 - 1)
-number = st.floats(allow_nan=False, allow_infinity=False)
 
 
 def strategy(schema: dict[str, Any], annotation: str) -> st.SearchStrategy[Any]:
@@ -65,7 +64,12 @@ def strategy(schema: dict[str, Any], annotation: str) -> st.SearchStrategy[Any]:
     if kind == "integer":
         return st.integers(schema.get("minimum", -(2**63)), schema.get("maximum", 2**63 - 1))
     if kind == "number":
-        return number
+        least, most = (schema.get(name, schema.get(f"exclusive{name.capitalize()}")) for name in ("minimum", "maximum"))
+        return st.floats(
+            least, most,
+            exclude_min="exclusiveMinimum" in schema, exclude_max="exclusiveMaximum" in schema, allow_nan=False,
+            allow_infinity=False,
+        )  # fmt: skip
     if kind == "string" and schema.get("format") == "binary":
         return st.binary(max_size=40)
     if kind == "string" and "pattern" in schema:
@@ -74,7 +78,8 @@ def strategy(schema: dict[str, Any], annotation: str) -> st.SearchStrategy[Any]:
         most = min(30, schema.get("maxLength", 30))
         return st.text(min_size=schema.get("minLength", 0), max_size=most)
     if kind == "array":
-        return st.lists(strategy(schema["items"], annotation), max_size=4).map(tuple)
+        items = strategy(schema["items"], annotation)
+        return st.lists(items, min_size=schema.get("minItems", 0), max_size=4).map(tuple)
     if kind == "object" and isinstance(schema.get("additionalProperties"), dict):
         return st.dictionaries(st.text(max_size=6), strategy(schema["additionalProperties"], annotation), max_size=3)
     if kind == "object":
