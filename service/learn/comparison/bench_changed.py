@@ -69,5 +69,6 @@ def run(seeds: int = 1) -> dict[str, Any]:
         ratios[f"{change}: from cost to clone"] = at["from-cost"] / max(at["clone"], 1e-9)
         ratios[f"{change}: from cost to the version as it was"] = at["from-cost"] / max(at["proximal"], 1e-9)
         gain = at["from-cost"] - at["proximal"]
-        targets[f"{change}: score gained over the version as it was"] = {"goal": 0.0, "value": gain, "met": gain >= 0}
+        # Where the version as it was is kept nothing is gained: that meets no target.
+        targets[f"{change}: score gained over the version as it was"] = {"goal": 0.0, "value": gain, "met": gain > 0}
     return {"bench": "changed-dynamics", "figures": figures, "ratios": ratios, "targets": targets}
