@@ -3,9 +3,10 @@
 Nothing here ever raises for a silent, late or wrong service, and nothing waits longer than the caller allows.
 
 How both ends agree after a trip: when this end's lease runs out it latches and stays silent until the server's
-deadline has passed too, so that the server latches as well (or has been restarted, and is latched). It then asks
-again and follows the server's fallback; the policy acts again only after an operator has re-armed the server, which
-cannot be done before the server has latched: arming an armed rig changes nothing.
+deadline has passed too, counted from the latest moment at which what was sent before may arrive, so that the server
+latches as well (or has been restarted, and is latched). It then asks again and follows the server's fallback; the
+policy acts again only after an operator has re-armed the server, which cannot be done before the server has latched:
+arming an armed rig changes nothing.
 
 An operator can take the rig over at any moment. From then on the link does what the operator wants, within the same
 magnitude, slew and braking limits, and waits for nobody; the server goes on seeing what happens. That ends the
@@ -366,7 +367,9 @@ class RigLink:
 
     def _silence_ns(self) -> int:
         """Return how long the server must hear nothing to be surely latched."""
-        return round((self._rig.timing.deadline_s + 2 * self._rig.timing.period_s) * 1e9)
+        # What was sent before may still arrive, late by up to a deadline (later, the server latches for that); only
+        # from then on does the server hear nothing, and counts its own deadline.
+        return round(2 * (self._rig.timing.deadline_s + self._rig.timing.period_s) * 1e9)
 
 
 def _changes(limited: Limited) -> Reason:

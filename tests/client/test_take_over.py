@@ -75,7 +75,7 @@ def test_after_a_silent_service_handing_back_stays_silent_until_it_must_have_lat
     rigged.link._welcome = False  # as after a service that no longer knows the session
     rigged.link.hand_back()
     asked = len(pretender.acts)
-    for _ in range(round((DEADLINE_S + 2 * PERIOD_S) / PERIOD_S) - 1):
+    for _ in range(round(2 * (DEADLINE_S + PERIOD_S) / PERIOD_S) - 1):
         assert not rigged.exchange().fresh
     assert len(pretender.acts) == asked
     assert rigged.exchange().fresh

@@ -16,7 +16,7 @@ from typing import Any
 import pytest
 
 from nearhand.client.faults.injections import SteppedClock
-from nearhand.client.faults.proxy import Proxy
+from nearhand.client.faults.proxy import Proxy, pass_on
 from nearhand.client.link import Drive, RigLink
 from nearhand.service.bus.control_messages import Drain, DrainReply
 from tests.client.pretenders import DEADLINE_S, PERIOD_S, STILL, Server, crane, policy_bytes
@@ -141,3 +141,18 @@ def test_the_server_latches_within_deadline_and_one_period_of_a_rig_that_falls_s
                 assert now_s - paced.last_good_s < 20.0
         # Asked again and again, the server's state is seen late by at most one such question.
         assert DEADLINE_S <= now_s - paced.last_good_s <= PROMISE_S + late_s
+
+
+def test_queries_still_under_way_at_the_trip_do_not_keep_the_server_armed(server: Server) -> None:
+    server.load(policy_bytes())
+    with Proxy(server.settings.action) as proxy, RigLink(crane(), proxy.address) as link:
+        paced = Paced(link)
+        _arm(server, paced)
+        # Queries arrive late, though within the deadline, and their replies are lost: only the link trips at first.
+        late_s = 0.7 * DEADLINE_S
+        proxy.mischief = lambda frame: [(late_s, frame)] if b"obs" in frame else []
+        paced.until(lambda drive: drive.mode == "latched")
+        proxy.mischief = pass_on
+        drives = [paced.exchange() for _ in range(40)]
+        assert any(drive.fresh for drive in drives)
+        assert {drive.mode for drive in drives} == {"latched"}
